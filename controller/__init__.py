@@ -1,0 +1,1 @@
+"""The controller: from configuration to route, run, safety, record and reduction."""

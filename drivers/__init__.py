@@ -1,0 +1,1 @@
+"""Drivers: what a device must offer, and the families that offer it."""

@@ -1,0 +1,103 @@
+"""The only reader of time.
+
+``Clock`` is what every other module asks. In a rehearsal the event loop itself is virtual: it jumps
+to the next deadline when nothing is ready, so that the product runs unchanged and hours pass in
+seconds. Virtual time starts at zero and counts up (a loop clock as large as a Unix time stamp would
+livelock: one float step is then coarser than the loop's clock resolution).
+"""
+
+from __future__ import annotations
+
+import asyncio
+import selectors
+import time
+from collections.abc import Callable
+from datetime import UTC, datetime, timedelta
+from typing import Any, NoReturn
+
+NS = 1_000_000_000
+
+
+class NothingScheduled(RuntimeError):
+    """A virtual loop with nothing ready and no timer would wait for ever: a defect, said at once."""
+
+
+class _JumpingSelector(selectors.SelectSelector):
+    """Never sleeps: adds the wait to the loop's clock instead."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.jump: Callable[[float], None] | None = None
+
+    def select(self, timeout: float | None = None) -> list[tuple[selectors.SelectorKey, int]]:
+        if timeout == 0:
+            return []
+        if timeout is None:
+            raise NothingScheduled("nothing is ready and no timer is set: the program is deadlocked")
+        assert self.jump is not None
+        self.jump(timeout)
+        return []
+
+
+class VirtualLoop(asyncio.SelectorEventLoop):
+    """An event loop whose time is a counter. It refuses threads: they would run in real time."""
+
+    def __init__(self) -> None:
+        selector = _JumpingSelector()
+        super().__init__(selector)
+        self._virtual_now = 0.0
+        self._interrupt: Callable[[], None] | None = None
+        selector.jump = self._jump
+
+    def time(self) -> float:
+        return self._virtual_now
+
+    def _jump(self, seconds: float) -> None:
+        # The loop computed `seconds` as deadline - now; a deadline that floats just short of itself
+        # would be waited for again with a zero-length jump, so step at least one resolution.
+        if seconds > 0:
+            self._virtual_now += max(seconds, 1e-9)
+
+    def run_in_executor(self, executor: Any, func: Any, *args: Any) -> NoReturn:
+        raise RuntimeError("no threads in virtual time")
+
+
+class Clock:
+    """Monotonic integer nanoseconds, and wall time derived from them.
+
+    ``mono_ns`` never steps. ``wall`` in a rehearsal is a fixed start plus the virtual time, so that
+    two equal rehearsals make equal records.
+    """
+
+    def __init__(self, *, virtual: bool, wall_start: datetime | None = None) -> None:
+        self.virtual = virtual
+        self._loop = asyncio.get_running_loop()
+        self._zero = 0.0 if virtual else self._loop.time()
+        self._wall_start = wall_start or datetime.now(UTC)
+
+    def mono_ns(self) -> int:
+        """Nanoseconds since the clock was made."""
+        return round((self._loop.time() - self._zero) * NS)
+
+    def seconds(self) -> float:
+        """The same in seconds, for the simulated plant."""
+        return self._loop.time() - self._zero
+
+    def wall(self) -> datetime:
+        """UTC. Only for people and records, never for a decision."""
+        if self.virtual:
+            return self._wall_start + timedelta(seconds=self._loop.time())
+        return datetime.now(UTC)
+
+    async def sleep(self, seconds: float) -> None:
+        await asyncio.sleep(seconds)
+
+    async def sleep_until_ns(self, deadline_ns: int) -> None:
+        """Sleep to an absolute deadline, so that periods do not drift."""
+        wait = self._zero + deadline_ns / NS - self._loop.time()
+        await asyncio.sleep(wait if wait > 0 else 0)
+
+
+def real_seconds() -> float:
+    """Real elapsed time, for progress and timing reports only; a rehearsal's own clock is virtual."""
+    return time.perf_counter()
