@@ -89,6 +89,11 @@ class Clock:
             return self._wall_start + timedelta(seconds=self._loop.time())
         return datetime.now(UTC)
 
+    @staticmethod
+    def utc(timestamp: float) -> datetime:
+        """A Unix time stamp as UTC, for people."""
+        return datetime.fromtimestamp(timestamp, UTC)
+
     async def sleep(self, seconds: float) -> None:
         await asyncio.sleep(seconds)
 
