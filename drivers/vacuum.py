@@ -1,0 +1,17 @@
+"""A vacuum gauge."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+from drivers.contract import Link, Opened
+from drivers.polled import PolledMonitor, Quantity
+
+# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
+QUANTITIES = (Quantity("pascals", "Pa", 0.0, 200000.0),)
+
+
+def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
+    """Make the device over its link."""
+    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
+    return Opened(monitor, None, None)
