@@ -58,7 +58,9 @@ class VirtualLoop(asyncio.SelectorEventLoop):
         if seconds > 0:
             self._virtual_now += max(seconds, 1e-9)
 
-    def run_in_executor(self, executor: Any, func: Any, *args: Any) -> NoReturn:
+    def run_in_executor(  # type: ignore[override]
+        self, executor: Any, func: Any, *args: Any
+    ) -> NoReturn:
         raise RuntimeError("no threads in virtual time")
 
 

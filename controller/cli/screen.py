@@ -77,9 +77,7 @@ class Progress:
     before that, the forecast.
     """
 
-    def __init__(
-        self, screen: Screen, clock: Clock, itinerary: Itinerary, forecast_seconds: float
-    ) -> None:
+    def __init__(self, screen: Screen, clock: Clock, itinerary: Itinerary, forecast_seconds: float) -> None:
         self._screen, self._clock, self._itinerary = screen, clock, itinerary
         self._forecast = forecast_seconds
         self._first: tuple[int, float] | None = None
@@ -128,5 +126,3 @@ class Progress:
             f" {visit.station.name} {visit.stop.label}: {100 * (visit.number + 1) / itinerary.total:.0f} %,"
             f" {duration(left)} left, ends {finish}{speed}"
         )
-
-

@@ -118,7 +118,9 @@ class Actions:
                         ExitCode.NOT_PERMITTED,
                     ) from error
                 self._stale_factor.add(station.name)
-                self._rig.event("warning", "centring", f"station {station.name}: kept the old centre: {error}")
+                self._rig.event(
+                    "warning", "centring", f"station {station.name}: kept the old centre: {error}"
+                )
         return Event.CENTRED
 
     async def _centre_station(self, station: Station) -> None:

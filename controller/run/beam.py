@@ -70,7 +70,9 @@ class Beam:
         starts = {output: self.set_volts[output] for output in targets}
         stages = 1
         for output, target in targets.items():
-            stages = max(stages, math.ceil(abs(target - starts[output]) / self._settings[output].step_volts_max))
+            stages = max(
+                stages, math.ceil(abs(target - starts[output]) / self._settings[output].step_volts_max)
+            )
         for stage in range(1, stages + 1):
             share = stage / stages
             for output, target in targets.items():
@@ -106,5 +108,3 @@ class Beam:
                 return True
             await rig.supervisor.wait_tick()
         return False
-
-

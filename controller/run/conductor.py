@@ -114,9 +114,7 @@ class Conductor:
                 continue
             await self._end_action()
             target = self.machine.fire(posted.event)
-            self._rig.record.state(
-                self._rig.clock.mono_ns(), state.value, posted.event.value, target.value
-            )
+            self._rig.record.state(self._rig.clock.mono_ns(), state.value, posted.event.value, target.value)
             self._note(posted, state)
             if target in (State.PARKED, State.UNCONFIRMED):
                 return self._outcome(target)
