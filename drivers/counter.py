@@ -2,17 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-from drivers.contract import Link, Opened
-from drivers.integrating import TelegramDetector
-from drivers.polled import PolledMonitor, Quantity
-
-# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
-QUANTITIES = (Quantity("rate", "1/s", 0.0, 1000000000000.0),)
+from drivers.gates import GatedDetector
+from drivers.polled import Family, Quantity
 
 
-def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device over its link."""
-    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
-    return Opened(monitor, None, TelegramDetector(role, link))
+class Counter(Family):
+    """Ratemeter over the last 100 ms, and a gate that counts pulses."""
+
+    quantities = (Quantity("rate", "1/s", 0.0, 1e10),)
+    detector_class = GatedDetector

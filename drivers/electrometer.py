@@ -1,18 +1,13 @@
-"""The electrometer on the collector."""
+"""The electrometer behind the Faraday cup."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-from drivers.contract import Link, Opened
-from drivers.integrating import TelegramDetector
-from drivers.polled import PolledMonitor, Quantity
-
-# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
-QUANTITIES = (Quantity("volts", "V", -1000.0, 1000.0),)
+from drivers.gates import GatedDetector
+from drivers.polled import Family, Quantity
 
 
-def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device over its link."""
-    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
-    return Opened(monitor, None, TelegramDetector(role, link))
+class Electrometer(Family):
+    """Output volts, and a gate that integrates them."""
+
+    quantities = (Quantity("volts", "V", -1e3, 1e3),)
+    detector_class = GatedDetector

@@ -1,22 +1,18 @@
-"""A high-voltage supply with one output: accelerating, detector."""
+"""A high-voltage supply: accelerating or detector."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-from drivers.contract import Link, Opened
-from drivers.output import TelegramHandle
-from drivers.polled import PolledMonitor, Quantity
-
-# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
-QUANTITIES = (
-    Quantity("volts", "V", -100000.0, 100000.0),
-    Quantity("amps", "A", -10.0, 10.0),
-    Quantity("set_volts", "V", -100000.0, 100000.0),
-)
+from drivers.handles import SupplyHandle
+from drivers.polled import Family, Quantity
 
 
-def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device over its link."""
-    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
-    return Opened(monitor, TelegramHandle(role, link), None)
+class HighVoltage(Family):
+    """One output, positive as read; the polarity is the wiring's."""
+
+    quantities = (
+        Quantity("volts", "V", -1e3, 1e5),
+        Quantity("amps", "A", -1.0, 10.0),
+        Quantity("set_volts", "V", 0.0, 1e5),
+    )
+    with_status = True
+    handle_class = SupplyHandle

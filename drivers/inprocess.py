@@ -1,67 +1,82 @@
-"""A link to a device's twin in the same process: telegrams are passed as they are.
+"""A link to a device's twin that lives in this process.
 
-The twin is duck-typed and never trusted: it may not answer (``None``), or answer with anything at all.
-The checks are the same as for a wire, so that nothing is kinder in a rehearsal.
+The twin is any object with three methods (docs/telegrams.md), so that nothing here names a simulator:
+
+* ``identity()`` -> (maker, model, serial, firmware, simulated), or None for no answer;
+* ``report()`` -> (sequence, status, values), or None for no answer, or anything else for a garbled one;
+* ``command(verb, *values)`` -> (code, *values), or None for no answer.
+
+A report is passed on as it came: the monitor validates, the link only carries.
 """
 
 from __future__ import annotations
 
 import math
-from typing import Any
+from typing import Protocol, cast
 
-from drivers.contract import Deliver, DeviceRefused, DeviceReplied, DeviceTimeout
+from drivers.contract import Deliver, DeviceRefused, DeviceReplied, DeviceTimeout, Report
 
-# The answer codes of docs/telegrams.md.
+# Meaning of the answer's code, from docs/telegrams.md.
 CODES = {
-    1: "unknown command",
-    2: "value outside the device's own limits",
-    3: "not in remote control",
-    4: "the device has tripped",
-    5: "not ready",
+    1: "the verb is unknown to the device",
+    2: "the value is outside the device's own limits",
+    3: "the device is not in remote control",
+    4: "the device has tripped by itself",
+    5: "the device is not ready",
 }
 
 
-class InProcessLink:
-    """One twin's conversation, as ``drivers.contract.Link``."""
+class Twin(Protocol):
+    """What a device in this process must offer. Answers are objects: they may be garbled."""
 
-    def __init__(self, role: str, twin: Any) -> None:
-        self._role, self._twin = role, twin
-        self._report = twin.report
+    def identity(self) -> object: ...
+
+    def report(self) -> object: ...
+
+    def command(self, verb: str, *values: float) -> object: ...
+
+
+class InProcessLink:
+    """Carries one device's telegrams by calling its twin. Implements ``drivers.contract.Link``."""
+
+    __slots__ = ("_command", "_identity", "_report", "role")
+
+    def __init__(self, role: str, twin: Twin) -> None:
+        self.role = role
+        self._identity, self._report, self._command = twin.identity, twin.report, twin.command
 
     def identify(self) -> tuple[str, str, str, str, bool]:
-        """Raises DeviceTimeout, DeviceReplied."""
-        answer = self._twin.identity()
+        """Ask who is there. Raises DeviceTimeout, DeviceReplied."""
+        answer = self._identity()
         if answer is None:
-            raise DeviceTimeout(self._role, "no answer to the identity query")
-        if not (isinstance(answer, tuple) and len(answer) == 5):
-            raise DeviceReplied(self._role, f"identity not understood: {answer!r:.80}")
-        maker, model, serial, firmware, simulated = answer
-        return str(maker), str(model), str(serial), str(firmware), simulated is True
+            raise DeviceTimeout(self.role, "no answer to the question who is there")
+        if not isinstance(answer, tuple) or [type(part) for part in answer] != [str, str, str, str, bool]:
+            raise DeviceReplied(self.role, f"identity could not be read: {answer!r:.80}")
+        return answer
 
     def request_report(self, deliver: Deliver) -> None:
+        """Fetch one report and deliver it at once."""
         answer = self._report()
-        deliver(DeviceTimeout(self._role, "no reply") if answer is None else answer)
+        if answer is None:
+            deliver(DeviceTimeout(self.role, "no answer to a poll"))
+        else:
+            deliver(cast(Report, answer))
 
     async def command(self, verb: str, *values: float) -> tuple[float, ...]:
-        """Raises DeviceTimeout, DeviceReplied, DeviceRefused."""
-        answer = self._twin.command(verb, *values)
+        """Send one command. Raises DeviceTimeout, DeviceReplied, DeviceRefused."""
+        answer = self._command(verb, *values)
         if answer is None:
-            raise DeviceTimeout(self._role, f"no reply to {verb}")
-        return checked(self._role, verb, answer)
+            raise DeviceTimeout(self.role, f"no answer to `{verb}`; whether it was obeyed is unknown")
+        if not isinstance(answer, tuple) or not answer or not all(map(_is_number, answer)):
+            raise DeviceReplied(self.role, f"answer to `{verb}` could not be read: {answer!r:.80}")
+        if answer[0] != 0:
+            said = CODES.get(answer[0], f"code {answer[0]} is not in the table")
+            raise DeviceRefused(self.role, f"`{verb}` refused: {said}")
+        return answer[1:]
 
     def close(self) -> None:
-        """Nothing to release in process."""
+        """Nothing to release: the twin outlives the link."""
 
 
-def checked(role: str, verb: str, answer: object) -> tuple[float, ...]:
-    """The values of a command's answer, or the error that its code names."""
-    if not (isinstance(answer, tuple) and answer and all(type(part) in (int, float) for part in answer)):
-        raise DeviceReplied(role, f"reply to {verb} not understood: {answer!r:.80}")
-    code = answer[0]
-    if code != 0:
-        raise DeviceRefused(
-            role, f"{verb}: {CODES.get(int(code) if math.isfinite(code) else -1, f'code {code}')}"
-        )
-    if not all(math.isfinite(part) for part in answer):
-        raise DeviceReplied(role, f"reply to {verb} is not finite: {answer!r:.80}")
-    return answer[1:]
+def _is_number(part: object) -> bool:
+    return isinstance(part, (int, float)) and not isinstance(part, bool) and math.isfinite(part)

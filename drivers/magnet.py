@@ -1,23 +1,19 @@
-"""The magnet's current supply."""
+"""The magnet supply."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-from drivers.contract import Link, Opened
-from drivers.output import TelegramHandle
-from drivers.polled import PolledMonitor, Quantity
-
-# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
-QUANTITIES = (
-    Quantity("amps", "A", -1000.0, 1000.0),
-    Quantity("coil_volts", "V", -10000.0, 10000.0),
-    Quantity("set_amps", "A", -1000.0, 1000.0),
-    Quantity("coil_kelvin", "K", 200.0, 1000.0),
-)
+from drivers.handles import SupplyHandle
+from drivers.polled import Family, Quantity
 
 
-def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device over its link."""
-    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
-    return Opened(monitor, TelegramHandle(role, link), None)
+class MagnetSupply(Family):
+    """Amps into the coil, with the coil's volts and temperature."""
+
+    quantities = (
+        Quantity("amps", "A", -1e3, 1e3),
+        Quantity("coil_volts", "V", -1e3, 1e3),
+        Quantity("set_amps", "A", -1e3, 1e3),
+        Quantity("coil_kelvin", "K", 230.0, 700.0),
+    )
+    with_status = True
+    handle_class = SupplyHandle

@@ -1,17 +1,11 @@
-"""The field probe in the magnet's gap."""
+"""The field probe."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-from drivers.contract import Link, Opened
-from drivers.polled import PolledMonitor, Quantity
-
-# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
-QUANTITIES = (Quantity("tesla", "T", -20.0, 20.0),)
+from drivers.polled import Family, Quantity
 
 
-def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device over its link."""
-    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
-    return Opened(monitor, None, None)
+class FieldProbe(Family):
+    """Flux density in the magnet's gap."""
+
+    quantities = (Quantity("tesla", "T", -25.0, 25.0),)

@@ -1,53 +1,61 @@
-"""Which driver speaks to which kind of device: one explicit table, imported when used.
+"""Which driver speaks to which device: an explicit table, loaded when asked, extendable by packages.
 
-A package of somebody else's adds drivers through the entry-point group ``trackfield.drivers``; each
-entry point names a class with the signature of the families here.
+A package of its own adds a driver by an entry point in the group ``trackfield.drivers`` whose name is
+the driver's and whose object is a class like those of the table: ``open(role, link, now_ns)`` ->
+``Opened``. It cannot replace a driver of the table.
 """
 
 from __future__ import annotations
 
-import importlib
-from collections.abc import Callable
+from importlib import import_module
 from importlib.metadata import entry_points
 from typing import Protocol, cast
 
 from drivers.contract import DeviceAbsent, Link, Opened
+from drivers.gates import NowNs
 
 GROUP = "trackfield.drivers"
 
-DRIVERS: dict[str, str] = {
-    "magnet-supply": "drivers.magnet:open_device",
-    "field-probe": "drivers.probe:open_device",
-    "high-voltage": "drivers.high_voltage:open_device",
-    "esa-pair": "drivers.esa:open_device",
-    "source-gate": "drivers.source_gate:open_device",
-    "counter": "drivers.counter:open_device",
-    "electrometer": "drivers.electrometer:open_device",
-    "vacuum-gauge": "drivers.vacuum:open_device",
-    "water": "drivers.water:open_device",
-    "interlock-inputs": "drivers.interlock:open_inputs",
-    "permit-output": "drivers.interlock:open_permit",
+DRIVERS = {
+    "magnet-supply": "drivers.magnet:MagnetSupply",
+    "field-probe": "drivers.probe:FieldProbe",
+    "high-voltage": "drivers.high_voltage:HighVoltage",
+    "esa-pair": "drivers.esa:EsaPair",
+    "source-gate": "drivers.source_gate:SourceGate",
+    "counter": "drivers.counter:Counter",
+    "electrometer": "drivers.electrometer:Electrometer",
+    "vacuum-gauge": "drivers.vacuum:VacuumGauge",
+    "water": "drivers.water:Water",
+    "interlock-inputs": "drivers.interlock:InterlockInputs",
+    "permit-output": "drivers.interlock:PermitOutput",
 }
 
 
-class Opener(Protocol):
-    """How a family makes its device."""
+class Driver(Protocol):
+    """What a registered class offers."""
 
-    def __call__(self, role: str, link: Link, now_ns: Callable[[], int]) -> Opened: ...
+    def open(self, role: str, link: Link, now_ns: NowNs) -> Opened: ...
 
 
-def names() -> list[str]:
-    """All drivers known, ours and others'."""
+def driver_names() -> list[str]:
+    """All names that an instrument file may use."""
     return sorted({*DRIVERS, *(point.name for point in entry_points(group=GROUP))})
 
 
-def open_device(role: str, driver: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device of a role with the driver of that name. Raises DeviceAbsent for an unknown one."""
-    where = DRIVERS.get(driver)
-    if where is not None:
-        module, _, name = where.partition(":")
-        return cast("Opener", getattr(importlib.import_module(module), name))(role, link, now_ns)
-    for point in entry_points(group=GROUP):
-        if point.name == driver:
-            return cast("Opener", point.load())(role, link, now_ns)
-    raise DeviceAbsent(role, f"no driver named {driver!r}; known: {', '.join(names())}")
+def open_device(role: str, driver: str, link: Link, now_ns: NowNs) -> Opened:
+    """Open the driver named ``driver`` over ``link``; nothing is sent yet.
+
+    ``now_ns`` is the monotonic clock by which readings are timed. Raises DeviceAbsent for an unknown
+    driver.
+    """
+    return _driver(role, driver).open(role, link, now_ns)
+
+
+def _driver(role: str, name: str) -> Driver:
+    target = DRIVERS.get(name)
+    if target is not None:
+        module, _, attribute = target.partition(":")
+        return cast(Driver, getattr(import_module(module), attribute))
+    for point in entry_points(group=GROUP, name=name):
+        return cast(Driver, point.load())
+    raise DeviceAbsent(role, f"no driver is called {name!r}; known: {', '.join(driver_names())}")

@@ -1,18 +1,14 @@
-"""The source gate: open, ions may leave the source."""
+"""The gate that lets ions leave the source."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-from drivers.contract import Link, Opened
-from drivers.output import GateHandle
-from drivers.polled import PolledMonitor, Quantity
-
-# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
-QUANTITIES = (Quantity("open", "", 0.0, 1.0),)
+from drivers.handles import GateHandle
+from drivers.polled import Family, Quantity
 
 
-def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device over its link."""
-    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
-    return Opened(monitor, GateHandle(role, link), None)
+class SourceGate(Family):
+    """Open 1, shut 0."""
+
+    quantities = (Quantity("open", "", 0.0, 1.0),)
+    with_status = True
+    handle_class = GateHandle

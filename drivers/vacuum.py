@@ -2,16 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-from drivers.contract import Link, Opened
-from drivers.polled import PolledMonitor, Quantity
-
-# Values of a report, in the order of docs/telegrams.md; the ranges only tell an answer from garbage.
-QUANTITIES = (Quantity("pascals", "Pa", 0.0, 200000.0),)
+from drivers.polled import Family, Quantity
 
 
-def open_device(role: str, link: Link, now_ns: Callable[[], int]) -> Opened:
-    """Make the device over its link."""
-    monitor = PolledMonitor(role, QUANTITIES, link, now_ns)
-    return Opened(monitor, None, None)
+class VacuumGauge(Family):
+    """Total pressure. A gauge that is off reads zero, and zero is no pressure: it is not plausible."""
+
+    quantities = (Quantity("pascals", "Pa", 1e-13, 2e5),)
