@@ -31,11 +31,13 @@ class Journal(Protocol):
     """Append-only. All methods but ``durable`` return at once; none raises on a full disk: the
     writer remembers the failure in ``fault`` and the supervisor's next tick reads it (row 13)."""
 
-    fault: str | None
+    @property
+    def fault(self) -> str | None: ...
 
     def telemetry(self, tick: int, at_ns: int, values: Sequence[float | None], notes: str | None) -> None:
         """One tick. ``values`` follow the channel list given at creation; None where nothing new was
-        heard. ``notes`` is JSON for anything unusual (quality not good, heard at another time)."""
+        heard (NaN means the same and is ten times cheaper to store). ``tick`` counts up by one.
+        ``notes`` is JSON for anything unusual (quality not good, heard at another time)."""
 
     def request(
         self,
@@ -55,7 +57,13 @@ class Journal(Protocol):
         """One transition of the state machine."""
 
     def event(
-        self, at_ns: int, severity: str, kind: str, source: str, text: str, data: Mapping[str, object] | None = None
+        self,
+        at_ns: int,
+        severity: str,
+        kind: str,
+        source: str,
+        text: str,
+        data: Mapping[str, object] | None = None,
     ) -> None:
         """Anything a person should find later: severity "info" | "warning" | "trip"."""
 
