@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Literal, Self
 
-from pydantic import Field
+from pydantic import Field, model_validator
 
 from controller.config.units import (
     Amps,
@@ -63,6 +63,19 @@ class MagnetSettings(Settings):
     deviation: Amps = Field(gt=0)
     coil_kelvin_trip: Kelvin = Field(gt=273, le=500)
 
+    @model_validator(mode="after")
+    def _consistent(self) -> Self:
+        if self.safe_amps >= self.amps_max:
+            raise ValueError(f"safe_amps {self.safe_amps:g} A must be below amps_max {self.amps_max:g} A")
+        if self.field_min >= self.field_max:
+            raise ValueError(f"field_min {self.field_min:g} T must be below field_max {self.field_max:g} T")
+        if self.field_max >= self.saturation:
+            raise ValueError(f"field_max {self.field_max:g} T must be below saturation {self.saturation:g} T")
+        if self.amps_max * self.resistance >= self.compliance:
+            needed = self.amps_max * self.resistance
+            raise ValueError(f"compliance {self.compliance:g} V cannot hold amps_max: that takes {needed:g} V")
+        return self
+
 
 class HighVoltageSettings(Settings):
     """One high-voltage output's envelope."""
@@ -78,11 +91,23 @@ class HighVoltageSettings(Settings):
     bleed_seconds: Seconds = Field(gt=0, le=600)  # expected decay constant when off
     current_max: Amps = Field(gt=0, le=1)
 
+    @model_validator(mode="after")
+    def _safe_below_maximum(self) -> Self:
+        if self.safe_volts >= self.volts_max:
+            raise ValueError(f"safe_volts {self.safe_volts:g} V must be below volts_max {self.volts_max:g} V")
+        return self
+
 
 class AcceleratingSettings(HighVoltageSettings):
     nominal: Volts = Field(gt=0)  # potential at which the lightest ion of a station is measured
     source_offset: Volts = 0.0  # mean starting energy of the ions, per charge
     jump_span: Fraction = Field(gt=0, le=0.5)  # lowest potential = nominal * (1 - jump_span)
+
+    @model_validator(mode="after")
+    def _nominal_inside(self) -> Self:
+        if self.nominal > self.volts_max:
+            raise ValueError(f"nominal {self.nominal:g} V is above volts_max {self.volts_max:g} V")
+        return self
 
 
 class EsaSettings(HighVoltageSettings):
@@ -124,11 +149,23 @@ class VacuumLimits(Settings):
     permit: Pascals = Field(gt=0)
     trip: Pascals = Field(gt=0)
 
+    @model_validator(mode="after")
+    def _permit_is_stricter(self) -> Self:
+        if self.permit >= self.trip:
+            raise ValueError(f"permit {self.permit:g} Pa must be below trip {self.trip:g} Pa")
+        return self
+
 
 class WaterLimits(Settings):
     permit: CubicMetresPerSecond = Field(gt=0)
     trip: CubicMetresPerSecond = Field(gt=0)
     debounce: Seconds = Field(ge=0, le=2)
+
+    @model_validator(mode="after")
+    def _permit_is_stricter(self) -> Self:
+        if self.permit <= self.trip:
+            raise ValueError(f"permit {self.permit:g} m3/s must be above trip {self.trip:g} m3/s")
+        return self
 
 
 class InterlockSettings(Settings):
@@ -155,6 +192,12 @@ class DeviceSettings(Settings):
     poll: Seconds = Field(gt=0, le=60)
     stale_after: Seconds = Field(gt=0, le=300)
 
+    @model_validator(mode="after")
+    def _heard_before_stale(self) -> Self:
+        if self.stale_after < 2 * self.poll:
+            raise ValueError(f"stale_after {self.stale_after:g} s must be at least two polls of {self.poll:g} s")
+        return self
+
 
 class Devices(Settings):
     magnet: DeviceSettings
@@ -170,6 +213,16 @@ class Devices(Settings):
     water: DeviceSettings
     interlocks: DeviceSettings
     permit: DeviceSettings
+
+    @model_validator(mode="after")
+    def _serials_differ(self) -> Self:
+        seen: dict[str, str] = {}
+        for role in type(self).model_fields:
+            serial = getattr(self, role).serial
+            if serial in seen:
+                raise ValueError(f"{role} and {seen[serial]} have the same serial {serial!r}")
+            seen[serial] = role
+        return self
 
 
 class Simulation(Settings):
@@ -205,3 +258,20 @@ class Instrument(Settings):
     interlocks: InterlockSettings
     devices: Devices
     simulation: Simulation = Simulation()
+
+    @model_validator(mode="after")
+    def _consistent(self) -> Self:
+        for role in Devices.model_fields:
+            device: DeviceSettings = getattr(self.devices, role)
+            if device.address.startswith("sim:") is not (self.kind == "simulated"):
+                raise ValueError(
+                    f"devices.{role}.address {device.address!r} does not go with kind {self.kind!r}: "
+                    "only a simulated instrument has sim: addresses"
+                )
+        if self.geometry.magnet_radius >= 2 * self.geometry.esa_radius:
+            raise ValueError("no double focus: magnet_radius must be below twice esa_radius")
+        if self.simulation.eddy_amplitudes and len(self.simulation.eddy_amplitudes) != len(
+            self.simulation.eddy_seconds
+        ):
+            raise ValueError("simulation.eddy_amplitudes and eddy_seconds must have the same length")
+        return self

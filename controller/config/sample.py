@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Literal, Self
 
-from pydantic import Field
+from pydantic import Field, model_validator
 
 from controller.config.units import ElectronVolts, Fraction, Kelvin, PerSecond, Seconds, Settings
 
@@ -27,7 +27,14 @@ class ComponentSettings(Settings):
 
     name: str
     rate: PerSecond = Field(gt=0)  # ions per second arriving at the collector, summed over ions
-    ions: dict[str, float]  # ion label -> relative abundance (need not sum to 1)
+    ions: dict[str, float] = Field(min_length=1)  # ion label -> relative abundance (need not sum to 1)
+
+    @model_validator(mode="after")
+    def _abundances_are_positive(self) -> Self:
+        for label, abundance in self.ions.items():
+            if not abundance > 0:
+                raise ValueError(f"abundance of {label} must be above zero, not {abundance:g}")
+        return self
 
 
 class Sample(Settings):

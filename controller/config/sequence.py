@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Literal, Self
 
-from pydantic import Field
+from pydantic import Field, model_validator
 
 from controller.config.units import AtomicMass, Fraction, Seconds, Settings
 
@@ -86,3 +86,36 @@ class Sequence(Settings):
     interferences: tuple[InterferenceSettings, ...] = ()
     normalisation: NormalisationSettings | None = None
     reduction: ReductionSettings = ReductionSettings()
+
+    @model_validator(mode="after")
+    def _names_are_known(self) -> Self:
+        labels = [item.ion for item in self.ions]
+        stops = labels + [item.name for item in self.backgrounds]
+        twice = sorted({label for label in stops if stops.count(label) > 1})
+        if twice:
+            raise ValueError(f"named twice: {', '.join(twice)}")
+        stations = [station.name for station in self.stations]
+        if len(set(stations)) < len(stations):
+            raise ValueError("two stations have the same name")
+        named = [
+            (f"ratios[{i}].{end}", getattr(item, end))
+            for i, item in enumerate(self.ratios)
+            for end in ("numerator", "denominator")
+        ]
+        named += [
+            (f"interferences[{i}].{end}", getattr(item, end))
+            for i, item in enumerate(self.interferences)
+            for end in ("on", "monitor")
+        ]
+        if self.normalisation is not None:
+            named += [
+                ("normalisation.numerator", self.normalisation.numerator),
+                ("normalisation.denominator", self.normalisation.denominator),
+            ]
+        for key, label in named:
+            if label not in labels:
+                raise ValueError(f"{key} = {label!r} is not an ion of this sequence ({', '.join(labels)})")
+        for i, item in enumerate(self.ratios):
+            if item.numerator == item.denominator:
+                raise ValueError(f"ratios[{i}] divides {item.numerator} by itself")
+        return self
