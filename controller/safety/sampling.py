@@ -1,0 +1,102 @@
+"""Reading in: polls what is due and keeps the readings of all channels, and what of them is new.
+
+On the tick's path: plain tuples and slots, no objects per reading.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from typing import NamedTuple
+
+from controller.config.instrument import Instrument
+from controller.safety.interlocks import NS
+from drivers.contract import Channel, Monitor, Reading
+
+
+class _Device:
+    """One monitor's place in the snapshot and in the schedule of polls."""
+
+    __slots__ = ("every", "latest", "offset", "poll", "seen", "start", "stop")
+
+    def __init__(self, monitor: Monitor, start: int, every: int, offset: int) -> None:
+        self.poll, self.latest = monitor.poll, monitor.latest
+        self.start, self.stop = start, start + len(monitor.channels)
+        self.every, self.offset = every, offset
+        self.seen: tuple[Reading, ...] = ()
+
+
+class Sample(NamedTuple):
+    """What a tick has read: all readings; for the record only what was heard since the last one."""
+
+    readings: tuple[Reading, ...]
+    values: list[float | None]
+    notes: str | None
+
+
+class Sampler:
+    """Polls each device every whole number of ticks, in a fixed order."""
+
+    def __init__(self, instrument: Instrument, monitors: Mapping[str, Monitor]) -> None:
+        self.channels: tuple[Channel, ...] = tuple(
+            channel for monitor in monitors.values() for channel in monitor.channels
+        )
+        self._tick_ns = round(instrument.interlocks.tick * NS)
+        self._devices: list[_Device] = []
+        slot = 0
+        for number, (role, monitor) in enumerate(monitors.items()):
+            every = max(1, round(getattr(instrument.devices, role).poll / instrument.interlocks.tick))
+            # offsets spread devices of equal period over different ticks
+            self._devices.append(_Device(monitor, slot, every, number % every))
+            slot = self._devices[-1].stop
+        self._polls = [(device.every, device.offset, device.poll) for device in self._devices]
+        self._readings: list[Reading] = [
+            reading for monitor in monitors.values() for reading in monitor.latest()
+        ]
+        self._blank: list[float | None] = [None] * slot
+        self._not_good: dict[str, str] = {}  # channel -> why, as last noted
+
+    def poll_all(self) -> None:
+        """Ask every device once, before the first tick."""
+        for device in self._devices:
+            device.poll()
+
+    def poll(self, number: int) -> None:
+        """Ask the devices that are due at tick ``number``."""
+        for every, offset, poll in self._polls:
+            if not (number - offset) % every:
+                poll()
+
+    def collect(self, at_ns: int) -> Sample:
+        """Take in what has been heard."""
+        readings, values, not_good = self._readings, self._blank.copy(), self._not_good
+        notes: dict[str, object] | None = None
+        for device in self._devices:
+            heard = device.latest()
+            if heard is device.seen:
+                continue
+            device.seen = heard
+            slot = device.start
+            readings[slot : device.stop] = heard
+            for reading in heard:
+                value, quality, heard_ns, source, _ = reading
+                if quality or not_good:
+                    notes = self._quality(notes, reading)
+                if not quality:
+                    values[slot] = value
+                slot += 1
+            if at_ns - heard_ns > self._tick_ns:
+                notes = notes or {}
+                notes[source.partition(".")[0]] = {"heard_ns": heard_ns}
+        return Sample(tuple(readings), values, json.dumps(notes) if notes else None)
+
+    def _quality(self, notes: dict[str, object] | None, reading: Reading) -> dict[str, object] | None:
+        """Note a channel whose quality has changed."""
+        why = f"{reading.quality.name.lower()}: {reading.detail}" if reading.quality else ""
+        if self._not_good.get(reading.source, "") == why:
+            return notes
+        if why:
+            self._not_good[reading.source] = why
+        else:
+            del self._not_good[reading.source]
+        return {**(notes or {}), reading.source: why or "good again"}
