@@ -1,0 +1,113 @@
+"""What goes wrong on schedule. Each kind is one entry of a table: how it begins and how it ends."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+from simulator.plant import Plant
+from simulator.services import ATMOSPHERE
+from simulator.spec import ScheduledFault
+
+LEAK_SECONDS = 0.5  # time constant of a pressure rise in log scale
+Change = Callable[[float], None]
+
+
+def _cover(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+    def both(value: float) -> Change:
+        def change(t: float) -> None:
+            plant.set_input(t, "cover_a", value)
+            plant.set_input(t, "cover_b", value)
+
+        return change
+
+    return both(0.0), both(1.0)
+
+
+def _emergency(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+    return (
+        lambda t: plant.set_input(t, "emergency_stop", 0.0),
+        lambda t: plant.set_input(t, "emergency_stop", 1.0),
+    )
+
+
+def _water(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+    seconds, flow = plant.spec.services.pump_seconds, plant.spec.services.flow
+    return lambda t: plant.flow.go(t, 0.0, seconds), lambda t: plant.flow.go(t, flow, seconds)
+
+
+def _vacuum(which: str) -> Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change, Change]]:
+    def make(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+        level = plant.source_pressure if which == "source" else plant.analyser_pressure
+        rest = level.rest
+        return (
+            lambda t: level.go(t, ATMOSPHERE, LEAK_SECONDS),
+            lambda t: level.go(t, rest, 20 * LEAK_SECONDS),
+        )
+
+    return make
+
+
+def _arc(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+    return plant.supplies[fault.role or "accelerating"].arc, lambda t: None
+
+
+def _attribute(
+    name: str, begin: Callable[[ScheduledFault], Any], end: Any
+) -> Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change, Change]]:
+    def make(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+        target = _target(plant, twins, fault, name)
+        return lambda t: setattr(target, name, begin(fault)), lambda t: setattr(target, name, end)
+
+    return make
+
+
+def _target(plant: Plant, twins: dict[str, Any], fault: ScheduledFault, name: str) -> Any:
+    if fault.role is None:
+        raise ValueError(f"fault {fault.kind!r} needs a role")
+    if fault.role not in twins:
+        raise ValueError(f"fault {fault.kind!r}: no device has the role {fault.role!r}")
+    if name in ("deviation", "stuck"):
+        target = plant.supplies.get(fault.role, twins[fault.role])
+        if not hasattr(target, name):
+            raise ValueError(f"fault {fault.kind!r}: {fault.role!r} is not an output with a set-point")
+        return target
+    return twins[fault.role]
+
+
+def _frozen(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+    twin = _target(plant, twins, fault, "frozen")
+    return lambda t: twin.freeze(), lambda t: setattr(twin, "frozen", None)
+
+
+KINDS: dict[str, Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change, Change]]] = {
+    "cover open": _cover,
+    "water lost": _water,
+    "source vacuum lost": _vacuum("source"),
+    "analyser vacuum lost": _vacuum("analyser"),
+    "emergency stop": _emergency,
+    "arc": _arc,
+    "output deviates": _attribute("deviation", lambda fault: fault.size or 0.05, 0.0),
+    "output stuck": _attribute("stuck", lambda fault: True, False),
+    "reading frozen": _frozen,
+    "reading garbled": _attribute("garbled", lambda fault: True, False),
+    "no reply": _attribute("silent", lambda fault: True, False),
+}
+
+
+def schedule(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> None:
+    """Put a fault on the plant's timeline. Raises ValueError for an unknown kind or role."""
+    if fault.kind not in KINDS:
+        raise ValueError(f"no fault is called {fault.kind!r}; known: {', '.join(KINDS)}")
+    begin, end = KINDS[fault.kind](plant, twins, fault)
+
+    def logged(change: Change, word: str) -> Change:
+        def act(t: float) -> None:
+            plant.log.add(t, f"fault {fault.kind} {fault.role or ''} {word}".replace("  ", " "))
+            change(t)
+
+        return act
+
+    plant.timeline.add(fault.at, logged(begin, "begins"))
+    if fault.lasts is not None:
+        plant.timeline.add(fault.at + fault.lasts, logged(end, "ends"))
