@@ -73,7 +73,9 @@ class MagnetSettings(Settings):
             raise ValueError(f"field_max {self.field_max:g} T must be below saturation {self.saturation:g} T")
         if self.amps_max * self.resistance >= self.compliance:
             needed = self.amps_max * self.resistance
-            raise ValueError(f"compliance {self.compliance:g} V cannot hold amps_max: that takes {needed:g} V")
+            raise ValueError(
+                f"compliance {self.compliance:g} V cannot hold amps_max: that takes {needed:g} V"
+            )
         return self
 
 
@@ -195,7 +197,9 @@ class DeviceSettings(Settings):
     @model_validator(mode="after")
     def _heard_before_stale(self) -> Self:
         if self.stale_after < 2 * self.poll:
-            raise ValueError(f"stale_after {self.stale_after:g} s must be at least two polls of {self.poll:g} s")
+            raise ValueError(
+                f"stale_after {self.stale_after:g} s must be at least two polls of {self.poll:g} s"
+            )
         return self
 
 

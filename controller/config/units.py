@@ -59,7 +59,9 @@ def parse_quantity(text: str, unit: str) -> float:
     except pint.DimensionalityError:
         raise ValueError(f"{text!r} is not a quantity in {unit}") from None
     except (pint.PintError, ValueError, TypeError, AttributeError, AssertionError, OverflowError):
-        raise ValueError(f"{text!r} is not a number, a space and a unit (expected something in {unit})") from None
+        raise ValueError(
+            f"{text!r} is not a number, a space and a unit (expected something in {unit})"
+        ) from None
     except Exception as error:  # noqa: BLE001 - a unit parser fed with anything fails in any way
         raise ValueError(f"{text!r} is not understood as a quantity in {unit}: {error}") from None
     if not math.isfinite(value):

@@ -19,5 +19,5 @@ def reduce_record(path: str | Path) -> Reduction:
             record.readings(),
             parse_sequence(sequence.text, sequence.name),
             parse_instrument(instrument.text, instrument.name),
-            lambda label: parse_ion(label).mass_u,
+            lambda label: parse_ion(label).neutral_u,
         )

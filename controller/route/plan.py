@@ -238,5 +238,10 @@ class _Planner:
         )  # fmt: skip
         stops = tuple(sorted((*station.stops, stop), key=lambda s: s.mass_to_charge))
         stations[stations.index(station)] = Station(
-            station.name, station.reference, station.field_tesla, station.amps_estimate, station.centre_on, stops
+            station.name,
+            station.reference,
+            station.field_tesla,
+            station.amps_estimate,
+            station.centre_on,
+            stops,
         )

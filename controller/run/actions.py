@@ -6,23 +6,22 @@ say what came of it. The conductor starts them, cancels them, and drops an outco
 
 from __future__ import annotations
 
-import asyncio
+import contextlib
 from collections.abc import Awaitable, Callable
 
 from controller.errors import ExitCode
 from controller.physics.peak import peak_widths
 from controller.record.journal import DetectorRow
+from controller.route.forecast import CENTRING_POINTS, WIDE_SPAN
 from controller.route.plan import Station, Stop
 from controller.run.beam import Beam
 from controller.run.centring import Centre, NoPeak, ScanPoint, coarse_scan, find_centre, scan_factors
 from controller.run.field import Field
 from controller.run.itinerary import Itinerary, Visit
 from controller.run.machine import Event, State
-from controller.run.rig import Rig
+from controller.run.rig import Refused, Rig
 from drivers.contract import Integration
 
-COARSE_SPAN = 4e-3  # of mass: what dividers, radii and field law may be off before calibration
-FINE_POINTS = 21
 ENERGY_POINTS = 21
 CENTRE_GATE = 0.1  # s per point
 LATE_IN_A_ROW = 3  # stops that did not arrive before the run holds
@@ -113,7 +112,7 @@ class Actions:
                 if station.name not in self._factor:
                     raise RunStopped(
                         f"station {station.name}: no beam of {station.centre_on} found within "
-                        f"+-{COARSE_SPAN:.1%} of the expected mass ({error}). Next: check the source, "
+                        f"+-{WIDE_SPAN:.1%} of the expected mass ({error}). Next: check the source, "
                         "the slits and the instrument file's geometry",
                         ExitCode.NOT_PERMITTED,
                     ) from error
@@ -128,11 +127,11 @@ class Actions:
         stop = self._stop(station, station.centre_on)
         known = self._factor.get(station.name)
         if known is None:
-            half_span, points = coarse_scan(self._rig.instrument.geometry, COARSE_SPAN)
+            half_span, points = coarse_scan(self._rig.instrument.geometry, WIDE_SPAN)
             known = (await self._scan(station, stop, "wide", 1.0, half_span, points)).factor
             if self.beam.energy_trim == 0.0:
                 await self._centre_energy(station, stop, known)
-        centre = await self._scan(station, stop, "fine", known, 0.75 * widths.base, FINE_POINTS)
+        centre = await self._scan(station, stop, "fine", known, 0.75 * widths.base, CENTRING_POINTS)
         self._factor[station.name] = centre.factor
 
     async def _scan(
@@ -283,5 +282,6 @@ class Actions:
         return next(stop for stop in station.stops if stop.label == label)
 
     async def quiet(self) -> None:
-        """End the background work (the field regulator) before parking or at the end."""
-        await asyncio.shield(self.field.leave())
+        """End the background work (the field regulator) before parking; its own failure is past."""
+        with contextlib.suppress(Refused):
+            await self.field.leave()

@@ -19,6 +19,8 @@ from controller.errors import ExitCode
 from controller.run.actions import Actions, RunStopped
 from controller.run.machine import Event, RunMachine, State, targets
 from controller.run.rig import Refused, Rig
+from controller.safety.parking import ParkingOutcome
+from controller.safety.reflex import SupervisorEvent
 from controller.safety.values import Trip
 from drivers.contract import DeviceError
 
@@ -65,7 +67,7 @@ class Conductor:
         self._action: asyncio.Task[None] | None = None
         self._exit_code = ExitCode.DONE
         self._reason = "all blocks read"
-        self._abrupt = False
+        self.parking: ParkingOutcome | None = None
 
     @property
     def state(self) -> State:
@@ -85,11 +87,14 @@ class Conductor:
         """Go on after a hold: centring first, then the stop that was interrupted."""
         self._post(Event.RESUME, Priority.HOLD, None, reason)
 
-    def tripped(self, text: str, exit_code: ExitCode) -> None:
-        """The supervisor has tripped; ``text`` is its first-out line."""
-        self._post(Event.TRIP, Priority.TRIP, None, text)
-        if self._exit_code in (ExitCode.DONE, ExitCode.STOPPED):
-            self._exit_code, self._reason, self._abrupt = exit_code, text, True
+    def told(self, event: SupervisorEvent) -> None:
+        """What the supervisor says, after it has acted on the outputs. Its first-out decides the exit."""
+        if event.kind == "stop":
+            self._post(Event.STOP, Priority.STOP, None, event.text)
+            return
+        self._post(Event.TRIP, Priority.TRIP, None, event.text)
+        if event.kind == "trip" and self._exit_code in (ExitCode.DONE, ExitCode.STOPPED):
+            self._exit_code, self._reason = event.exit_code, event.text
 
     def _post(self, event: Event, priority: Priority, generation: int | None, reason: str) -> None:
         self._posted += 1
@@ -178,7 +183,8 @@ class Conductor:
             return None  # until an operator resumes or stops
         if state is State.PARKING:
             await self._actions.quiet()
-            outcome = await self._rig.supervisor.park(self._reason, abrupt=self._abrupt)
+            outcome = await self._rig.supervisor.park(self._reason)
+            self.parking = outcome
             return Event.CONFIRMED if outcome.confirmed else Event.UNCONFIRMED
         return await self._actions.table[state]()
 

@@ -28,6 +28,7 @@ from drivers.contract import Quality
 GAIN = 0.5
 # Below this part of the window the current is left alone, so that probe noise is not written to it.
 DEAD_BAND = 0.2
+AFTER_TICK_NS = 1_000_000
 
 
 class FieldState(NamedTuple):
@@ -141,8 +142,12 @@ class Field:
         window = settings.field_window
         amps_per_tesla = 1.0 / self._model.tesla_per_amp(self.amps)
         heard_ns = rig.clock.mono_ns()
+        # wake just after the tick that hears the probe; a wait for every tick would cost as much as a tick
+        period_ns = round(rig.instrument.devices.probe.poll * NS)
+        wake_ns = heard_ns - heard_ns % period_ns + AFTER_TICK_NS
         while True:
-            await rig.supervisor.wait_tick()
+            wake_ns += period_ns
+            await rig.clock.sleep_until_ns(wake_ns)
             reading = rig.supervisor.snapshot.readings[self._probe]
             if reading.at_ns <= heard_ns or reading.quality is not Quality.GOOD:
                 continue

@@ -1,0 +1,149 @@
+"""What a sequence will take and give, without running it (pure).
+
+Dead times are estimates from the instrument file: a voltage jump takes its slew and its settling, a
+magnet move its ramp and the hold, plus what the eddy lag and the probe's loop were seen to take. The
+run reports the measured times beside them.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from controller.config.instrument import Instrument
+from controller.config.sequence import RatioSettings, Sequence
+from controller.physics.peak import peak_widths
+from controller.route.dwell import counting_u, optimal_share
+from controller.route.plan import Route, Station, Stop
+
+LANDING_SECONDS = 2.0  # eddy lag and probe loop after a ramp; seen in rehearsals of the demo instrument
+POINT_SECONDS = 0.25  # one point of a centring scan: gate, jump and read-back
+CENTRING_POINTS = 21  # of a fine scan
+WIDE_SPAN = 4e-3  # of mass: what dividers, radii and field law may be off before calibration
+
+
+@dataclass(frozen=True, slots=True)
+class RatioForecast:
+    """Expected relative standard uncertainty of a ratio from counting alone, and the best dwells."""
+
+    name: str
+    u_relative: float
+    best_u_relative: float
+    best_seconds: tuple[float, float]
+
+
+@dataclass(frozen=True, slots=True)
+class Forecast:
+    """Times in s. ``dwell_seconds`` and ``dead_seconds`` are per cycle."""
+
+    dwell_seconds: float
+    dead_seconds: float
+    centring_seconds: float
+    start_seconds: float
+    total_seconds: float
+    expected_counts: dict[str, float]
+    ratios: tuple[RatioForecast, ...]
+
+    @property
+    def duty(self) -> float:
+        return self.dwell_seconds / (self.dwell_seconds + self.dead_seconds)
+
+
+def forecast(route: Route, sequence: Sequence, instrument: Instrument) -> Forecast:
+    """Times and counting statistics of a route."""
+    run = sequence.run
+    cycles = run.blocks * run.cycles_per_block
+    dwell = sum(stop.dwell_seconds for stop in route.stops)
+    dead = sum(_jump_seconds(route, instrument)) + sum(_move_seconds(route, instrument))
+    centring = len(route.stations) * (LANDING_SECONDS + CENTRING_POINTS * POINT_SECONDS)
+    start = _start_seconds(instrument) + len(route.stations) * _wide_points(instrument) * POINT_SECONDS
+    centrings = 1 + (run.blocks - 1) // run.centre_every
+    total = start + centrings * centring + cycles * (dwell + dead)
+    rates = {item.ion: item.expected_rate for item in sequence.ions if item.expected_rate is not None}
+    dwells = {stop.label: stop.dwell_seconds for stop in route.stops}
+    return Forecast(
+        dwell_seconds=dwell,
+        dead_seconds=dead,
+        centring_seconds=centring,
+        start_seconds=start,
+        total_seconds=total,
+        expected_counts={label: rate * dwells[label] * cycles for label, rate in rates.items()},
+        ratios=tuple(
+            _ratio(item, rates, dwells, cycles)
+            for item in sequence.ratios
+            if item.numerator in rates and item.denominator in rates
+        ),
+    )
+
+
+def _ratio(
+    item: RatioSettings, rates: dict[str, float], dwells: dict[str, float], cycles: int
+) -> RatioForecast:
+    pair = (item.numerator, item.denominator)
+    n = [rates[label] for label in pair]
+    t = [dwells[label] for label in pair]
+    best = optimal_share((1.0, -1.0), n, (0.0, 0.0), sum(t))
+    return RatioForecast(
+        f"{item.numerator}/{item.denominator}",
+        counting_u((1.0, -1.0), n, t, cycles),
+        best.u_relative / cycles**0.5,
+        (best.seconds[0], best.seconds[1]),
+    )
+
+
+def _jump_seconds(route: Route, instrument: Instrument) -> list[float]:
+    tick = instrument.interlocks.tick
+    answer = []
+    stops = route.stops
+    for before, stop in zip((stops[-1], *stops[:-1]), stops, strict=True):
+        accel = abs(stop.accel_volts - before.accel_volts) / instrument.accelerating.volts_per_second_max
+        esa = abs(stop.esa_volts - before.esa_volts) / instrument.esa.volts_per_second_max
+        settle = max(instrument.accelerating.settle, instrument.esa.settle)
+        # the read-back that proves arrival comes with the next poll
+        poll = instrument.devices.accelerating.poll
+        answer.append(max(accel, esa) + settle + 0.5 * (poll + tick))
+    return answer
+
+
+def _move_seconds(route: Route, instrument: Instrument) -> list[float]:
+    magnet = instrument.magnet
+    stations: tuple[Station, ...] = route.stations
+    if len(stations) == 1:
+        return []
+    return [
+        abs(station.amps_estimate - before.amps_estimate) / magnet.amps_per_second_max
+        + LANDING_SECONDS
+        + magnet.field_hold
+        for before, station in zip((stations[-1], *stations[:-1]), stations, strict=True)
+    ]
+
+
+def _wide_points(instrument: Instrument) -> int:
+    return round(2 * WIDE_SPAN / (0.4 * peak_widths(instrument.geometry).half_height)) + CENTRING_POINTS
+
+
+def _start_seconds(instrument: Instrument) -> float:
+    magnet, interlocks = instrument.magnet, instrument.interlocks
+    ramp = magnet.amps_max / magnet.amps_per_second_max
+    conditioning = magnet.conditioning_cycles * 2 * (ramp + magnet.conditioning_dwell)
+    return max(interlocks.detector_vacuum_hold, interlocks.cover_hold) + conditioning + 5.0
+
+
+def describe(route: Route) -> list[tuple[str, ...]]:
+    """The route as rows of a plain table: station, field, stop, volts, dwell."""
+    rows: list[tuple[str, ...]] = [("station", "field / T", "stop", "m/z", "V / V", "ESA / V", "dwell / s")]
+    for station in route.stations:
+        for place, stop in enumerate(station.stops):
+            rows.append(_row(station if place == 0 else None, stop))
+    return rows
+
+
+def _row(station: Station | None, stop: Stop) -> tuple[str, ...]:
+    return (
+        station.name if station else "",
+        f"{station.field_tesla:.6f}" if station else "",
+        stop.label,
+        f"{stop.mass_to_charge:.4f}",
+        f"{stop.accel_volts:.2f}",
+        f"{stop.esa_volts:.3f}",
+        f"{stop.dwell_seconds:g}",
+    )
