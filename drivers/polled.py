@@ -12,15 +12,13 @@ One unusable reply is discarded and asked again at once. The second in a row, or
 minute, makes the readings BAD: a line that needs asking twice so often is not to be trusted.
 Silence changes nothing here: it is seen by whoever holds the clock, as age.
 
-This is on the tick's path (a poll costs about 2 us with its readings), hence the C-level ``map`` and
-``zip`` in place of a loop with constructors.
+This is on the tick's path, hence the unrolled builder of readings.
 """
 
 from __future__ import annotations
 
 from collections import deque
 from collections.abc import Callable
-from itertools import repeat
 from math import nan
 from typing import ClassVar, NamedTuple
 
@@ -45,9 +43,6 @@ STATUS_VALUES = tuple(float(status) for status in range(32))
 BAD_ALLOWED = 2  # discards within BAD_WINDOW that are forgiven
 BAD_WINDOW_NS = 60_000_000_000
 
-_new = tuple.__new__
-_good, _no_detail, _reading = repeat(Quality.GOOD), repeat(""), repeat(Reading)
-
 
 class Quantity(NamedTuple):
     """One value of a family's report: SI unit and the range outside which it cannot be true."""
@@ -58,12 +53,45 @@ class Quantity(NamedTuple):
     high: float
 
 
+Build = Callable[[tuple[object, ...], float, int], "tuple[Reading, ...] | None"]
+
+
+def _builder(role: str, quantities: tuple[Quantity, ...], with_status: bool) -> Build:
+    """The function that turns good values into readings, unrolled for one device.
+
+    Written out as a loop it costs half as much again, and it runs a hundred times per second of
+    instrument time. It answers None for a value that is no plausible float, and raises ValueError for
+    a wrong number of values.
+    """
+    names = [f"v{number}" for number in range(len(quantities))]
+    tests = [
+        f"{name}.__class__ is float and {quantity.low!r} <= {name} <= {quantity.high!r}"
+        for name, quantity in zip(names, quantities, strict=True)
+    ]
+    sources = [*(quantity.name for quantity in quantities), *(["status"] if with_status else [])]
+    readings = [
+        f"new(Reading, ({name}, GOOD, now, {f'{role}.{source}'!r}, ''))"
+        for name, source in zip([*names, "status"], sources, strict=False)
+    ]
+    code = (
+        "def build(values, status, now, new=new, Reading=Reading, GOOD=GOOD):\n"
+        f"    {', '.join(names)}, = values\n"
+        f"    if {' and '.join(tests)}:\n"
+        f"        return ({', '.join(readings)},)\n"
+        "    return None\n"
+    )
+    scope: dict[str, Build] = {}
+    exec(code, {"new": tuple.__new__, "Reading": Reading, "GOOD": Quality.GOOD}, scope)
+    return scope["build"]
+
+
 class PolledMonitor:
     """The eyes on one device. Holds of the link only what looks: no command can be reached."""
 
     __slots__ = (
         "_asked_again",
         "_bad_ns",
+        "_build",
         "_close",
         "_count",
         "_deliver_bound",
@@ -108,6 +136,7 @@ class PolledMonitor:
         self._asked_again = False
         self._bad_ns: deque[int] = deque(maxlen=BAD_ALLOWED + 1)
         self._deliver_bound = self._deliver
+        self._build = _builder(role, quantities, with_status)
 
     async def identify(self) -> Identity:
         """Ask who is there. Raises DeviceError."""
@@ -134,24 +163,11 @@ class PolledMonitor:
                 and sequence > self._sequence
                 and status.__class__ is int
                 and values.__class__ is tuple
-                and len(values) == self._count
+                and status >= 0
             ):
-                for value, (low, high) in zip(values, self._ranges):  # noqa: B905 - equal by now
-                    if value.__class__ is not float or not low <= value <= high:
-                        break
-                else:
-                    if self._with_status:
-                        if status < 0:
-                            raise IndexError(status)
-                        values += (STATUS_VALUES[status],)
-                    self._sequence = sequence
-                    self._readings = tuple(
-                        map(
-                            _new,
-                            _reading,
-                            zip(values, _good, repeat(self._now_ns()), self._names, _no_detail),
-                        )
-                    )
+                readings = self._build(values, STATUS_VALUES[status], self._now_ns())
+                if readings is not None:
+                    self._sequence, self._readings = sequence, readings
                     return
         except (TypeError, ValueError, IndexError):
             pass  # garbled: said with its reason below

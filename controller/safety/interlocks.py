@@ -114,6 +114,7 @@ class Memory(NamedTuple):
     held: tuple[int, ...]
     bad: tuple[int, ...]
     tracks: tuple[Track, ...]
+    edges: tuple[tuple[int, int, int, float, int, float, float], ...]  # the tracks' head, as plain tuples
     calm: bool  # all held, nothing pending
 
 
@@ -122,25 +123,31 @@ def fresh_memory(envelope: Envelope) -> Memory:
     none = (-1,) * len(envelope.bounds)
     track = Track(0, 0, 0, nan, 0, -inf, inf, nan, nan, nan, nan, 0.0, 0, -1)
     tracks = tuple(track._replace(slot=t.slot, stale_ns=t.stale_ns, output=t.output) for t in envelope.tracks)
-    return Memory(none, none, tracks, False)
+    return _memory(none, none, tracks)
+
+
+def _memory(held: tuple[int, ...], bad: tuple[int, ...], tracks: tuple[Track, ...]) -> Memory:
+    calm = -1 not in held and max(bad) < 0 and all(track.out_ns < 0 for track in tracks)
+    edges = tuple((t.slot, t.stale_ns, t.output, t.demand, t.until_ns, t.low, t.high) for t in tracks)
+    return Memory(held, bad, tracks, edges, calm)
 
 
 def judge_tick(envelope: Envelope, snapshot: Snapshot, memory: Memory) -> tuple[Memory, tuple[Cause, ...]]:
     """The causes present in ``snapshot``, in order of priority, and the memory for the next tick."""
-    _, at, readings, demands, _, posted = snapshot
-    if posted or not memory.calm:
+    if snapshot[5] or not memory.calm:
         return judge_closely(envelope, snapshot, memory)
+    at, readings, demands = snapshot[1], snapshot[2], snapshot[3]
     for slot, low, high, stale in envelope.checks:
-        value, quality, heard, _, _ = readings[slot]
-        if quality or not low <= value <= high or not 0 <= at - heard <= stale:
+        reading = readings[slot]
+        if reading[1] or not low <= reading[0] <= high or not 0 <= at - reading[2] <= stale:
             return judge_closely(envelope, snapshot, memory)
     for slot in envelope.status_slots:
-        value, quality, _, _, _ = readings[slot]
-        if quality or value not in HEALTHY:
+        reading = readings[slot]
+        if reading[1] or reading[0] not in HEALTHY:
             return judge_closely(envelope, snapshot, memory)
-    for slot, stale, output, demand, until, low, high, *_ in memory.tracks:
-        value, quality, heard, _, _ = readings[slot]
-        if quality or not low <= value <= high or not 0 <= at - heard <= stale:
+    for slot, stale, output, demand, until, low, high in memory.edges:
+        reading = readings[slot]
+        if reading[1] or not low <= reading[0] <= high or not 0 <= at - reading[2] <= stale:
             return judge_closely(envelope, snapshot, memory)
         if demand != demands[output] or at >= until:
             return _judge_moved(envelope, snapshot, memory)
@@ -160,17 +167,17 @@ def _judge_moved(envelope: Envelope, snapshot: Snapshot, memory: Memory) -> tupl
             reading = snapshot.readings[track.slot]
             if not usable(reading, at, track.stale_ns) or not track.low <= reading.value <= track.high:
                 return judge_closely(envelope, snapshot, memory)
-    return Memory(memory.held, memory.bad, tuple(tracks), True), ()
+    return _memory(memory.held, memory.bad, tuple(tracks)), ()
 
 
 def judge_closely(envelope: Envelope, snapshot: Snapshot, memory: Memory) -> tuple[Memory, tuple[Cause, ...]]:
     """The slow pass, which defines the result."""
     causes: list[Cause] = []
     held, bad = _judge_bounds(envelope, snapshot, memory, causes)
-    tracks = [
+    tracks = tuple(
         _judge_track(limits, track, snapshot, causes)
         for limits, track in zip(envelope.tracks, memory.tracks, strict=True)
-    ]
+    )
     at = snapshot.at_ns
     for source, slot, stale in envelope.statuses if snapshot.live else ():
         reading = snapshot.readings[slot]
@@ -184,8 +191,7 @@ def judge_closely(envelope: Envelope, snapshot: Snapshot, memory: Memory) -> tup
         rank = PRIORITY[known]
         causes.append(Cause(f"{known}:{source}", known, known, rank, source, nan, nan, -1, at, detail))
     causes.sort(key=lambda cause: cause.priority)
-    calm = -1 not in held and max(bad, default=-1) < 0 and all(track.out_ns < 0 for track in tracks)
-    return Memory(held, bad, tuple(tracks), calm), tuple(causes)
+    return _memory(held, bad, tracks), tuple(causes)
 
 
 def _judge_bounds(

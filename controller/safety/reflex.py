@@ -6,7 +6,6 @@ before a line is written. The outcome of the commands is judged by read-back, at
 
 from __future__ import annotations
 
-import asyncio
 from collections.abc import Callable
 from typing import NamedTuple
 
@@ -59,12 +58,15 @@ class Reflex:
         """Forget what was applied, after a reset."""
         self._applied = NOTHING
 
-    async def act(self, present: tuple[Cause, ...], at_ns: int) -> None:
-        """Latch what is new and do what all causes together ask for."""
+    def act(self, present: tuple[Cause, ...], at_ns: int) -> tuple[Cause, ...]:
+        """Latch what is new and do what all causes together ask for.
+
+        Returns the new causes; the caller gives the loop one turn, in which the commands leave, and
+        then lets each be said.
+        """
         board = self._board
         known = {cause.id for cause in board.latches.causes}
         new = tuple(cause for cause in present if cause.id not in known)
-        quiet = board.latches.first_out is None
         if new:
             # a stop does not latch, but it takes the start back like a trip
             board.replace(latch(board.latches, new)._replace(started=False))
@@ -74,23 +76,19 @@ class Reflex:
             if new or outranks(output, effects[output], self._applied[output]):
                 self._lowering.apply(output, effects[output])
         self._applied = effects
-        if not new:
-            return
-        await asyncio.sleep(0)  # the commands leave
-        for cause in new:
-            self._say(cause, at_ns, quiet=quiet)
+        return new
 
-    def _say(self, cause: Cause, at_ns: int, *, quiet: bool) -> None:
+    def say(self, cause: Cause) -> None:
+        """Write a new cause into the record and tell the listener."""
         text, first = describe(cause), self._board.latches.first_out
         kind = "cause"
         if not TABLE[cause.row].latched:
             kind = "stop"
-        elif quiet and first is not None and cause.id == first.id:
+        elif first is not None and cause.id == first.id:
             kind = "trip"
         severity = "info" if kind == "stop" else "trip"
-        self._journal.event(
-            at_ns, severity, kind, cause.source, text, {"id": cause.id, "serves": cause.serves}
-        )
+        data = {"id": cause.id, "serves": cause.serves}
+        self._journal.event(cause.at_ns, severity, kind, cause.source, text, data)
         if self.listener is not None:
             exit_code = EXIT_CODES.get(cause.row, ExitCode.TRIPPED)
             self.listener(SupervisorEvent(kind, cause, text, exit_code))

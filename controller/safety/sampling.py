@@ -79,15 +79,13 @@ class Sampler:
             slot = device.start
             readings[slot : device.stop] = heard
             for reading in heard:
-                value, quality, heard_ns, source, _ = reading
-                if quality or not_good:
+                if reading[1] or not_good:
                     notes = self._quality(notes, reading)
-                if not quality:
-                    values[slot] = value
+                if not reading[1]:
+                    values[slot] = reading[0]
                 slot += 1
-            if at_ns - heard_ns > self._tick_ns:
-                notes = notes or {}
-                notes[source.partition(".")[0]] = {"heard_ns": heard_ns}
+            if at_ns - reading[2] > self._tick_ns:
+                notes = {**(notes or {}), reading[3].partition(".")[0]: {"heard_ns": reading[2]}}
         return Sample(tuple(readings), values, json.dumps(notes) if notes else None)
 
     def _quality(self, notes: dict[str, object] | None, reading: Reading) -> dict[str, object] | None:

@@ -57,6 +57,9 @@ class Supervisor:
         self._fault_said: str | None = None
         self._waiters: list[asyncio.Future[None]] = []
         self._closing = False
+        self._number = 0  # of the tick under way, or of the next
+        self._ended: asyncio.Future[None]
+        self._timer: asyncio.TimerHandle
         self.ticks = 0
         self.overruns = 0
         lowering = Lowering(board, gateway, clock, self.wait_tick)
@@ -176,45 +179,75 @@ class Supervisor:
 
     async def run(self) -> None:
         """Tick until closed."""
-        period, clock = self._tick_ns, self._clock
-        number = -(-clock.mono_ns() // period)
+        self._number = -(-self._clock.mono_ns() // self._tick_ns)
+        self._ended = asyncio.get_running_loop().create_future()
         self._sampler.poll_all()
+        self._timer = self._clock.call_at_ns(self._number * self._tick_ns, self._on_time)
         try:
-            while not self._closing:
-                await clock.sleep_until_ns(number * period)
-                late = clock.mono_ns() - number * period
-                if late > period:
-                    self._judge_lateness(late)
-                    number += late // period
-                try:
-                    sample = self._tick(number)
-                    at, latches = self._board.snapshot.at_ns, self._board.latches
-                    if self._present or latches.first_out is not None:
-                        await self._reflex.act(self._present, at)
-                    self._journal.telemetry(number, at, sample.values, sample.notes)
-                    if late <= period and self._watchdog is not None:
-                        self._watchdog()
-                except Exception as error:  # noqa: BLE001 - the boundary: row 12b, and the watchdog starves
-                    self.internal_fault(f"{type(error).__name__}: {error} in the tick")
-                self.ticks += 1
-                if self._waiters:
-                    self._release()
-                number += 1
+            await self._ended
         finally:
             self._closing = True
-            for waiter in self._waiters:
+            self._timer.cancel()
+            waiters, self._waiters = self._waiters, []
+            for waiter in waiters:
                 if not waiter.done():
                     waiter.set_exception(RuntimeError("the supervisor has ended"))
 
     def close(self) -> None:
-        """Let ``run`` end after the tick under way."""
+        """Let ``run`` end in place of the next tick."""
         self._closing = True
 
-    def _release(self) -> None:
-        waiters, self._waiters = self._waiters, []
-        for waiter in waiters:
-            if not waiter.done():
-                waiter.set_result(None)
+    def _on_time(self) -> None:
+        """One tick: read, freeze, judge, act. What is to be written and told comes after, in
+        ``_conclude``: at once when nothing happened, else when the commands have left."""
+        if self._closing:
+            if not self._ended.done():
+                self._ended.set_result(None)
+            return
+        period = self._tick_ns
+        late = self._clock.mono_ns() - self._number * period
+        if late > period:
+            self._judge_lateness(late)
+            self._number += late // period
+        try:
+            sample = self._tick(self._number)
+            if self._present or self._board.latches.first_out is not None:
+                new = self._reflex.act(self._present, self._board.snapshot.at_ns)
+                if new:
+                    # runs after the first steps of the tasks that were just made: those are the commands
+                    asyncio.get_running_loop().call_soon(self._conclude, sample, late, new)
+                    return
+        except Exception as error:  # noqa: BLE001 - the boundary: row 12b, and the watchdog starves
+            self._failed(error)
+            return
+        self._conclude(sample, late, ())
+
+    def _conclude(self, sample: Sample, late: int, new: tuple[Cause, ...]) -> None:
+        try:
+            for cause in new:
+                self._reflex.say(cause)
+            at = self._board.snapshot[1]
+            self._journal.telemetry(self._number, at, sample[1], sample[2])
+            if late <= self._tick_ns and self._watchdog is not None:
+                self._watchdog()
+        except Exception as error:  # noqa: BLE001 - the boundary: row 12b, and the watchdog starves
+            self._failed(error)
+            return
+        self._next()
+
+    def _failed(self, error: Exception) -> None:
+        self.internal_fault(f"{type(error).__name__}: {error} in the tick")
+        self._next()
+
+    def _next(self) -> None:
+        self.ticks += 1
+        self._number += 1
+        self._timer = self._clock.call_at_ns(self._number * self._tick_ns, self._on_time)
+        if self._waiters:
+            waiters, self._waiters = self._waiters, []
+            for waiter in waiters:
+                if not waiter.done():
+                    waiter.set_result(None)
 
     def _judge_lateness(self, late_ns: int) -> None:
         """Count and judge a late tick. In virtual time a tick is never late, by the same sum."""
@@ -238,7 +271,9 @@ class Supervisor:
             Snapshot, (number, at, sample[0], board.demands, board.live, posts)
         )
         before = self._memory
-        self._memory, self._present = memory, _ = judge_tick(board.envelope, snapshot, before)
-        if memory is not before and memory.held != board.latches.held:
-            board.replace(board.latches._replace(held=memory.held))
+        memory, self._present = judge_tick(board.envelope, snapshot, before)
+        if memory is not before:
+            self._memory = memory
+            if memory.held != board.latches.held:
+                board.replace(board.latches._replace(held=memory.held))
         return sample
