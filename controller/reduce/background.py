@@ -38,7 +38,8 @@ class Position(NamedTuple):
 
 
 class Under(NamedTuple):
-    """Background under one ion: its value in each block, the dark part of it, what to tell."""
+    """Background under one ion: its value in each block, the dark part of it, and why it is not what
+    was asked for ("" where it is)."""
 
     blocks: Array  # 1/s
     dark: float  # 1/s
@@ -77,7 +78,7 @@ def under(ion: Stop, found: Sequence[Position], *, mode: Mode, dark: float, bloc
         key=lambda position: position.stop.mass_to_charge,
     )
     if mode == "none" or not near:
-        missing = "" if mode == "none" else f"{ion.label}: no background position, only dark counts taken off"
+        missing = "" if mode == "none" else "no background position, only dark counts are taken off"
         return Under(np.full(blocks, dark), dark, missing)
     low, high, share = _neighbours(ion.mass_to_charge, [p.stop.mass_to_charge for p in near])
     if mode == "nearest":
@@ -87,7 +88,7 @@ def under(ion: Stop, found: Sequence[Position], *, mode: Mode, dark: float, bloc
         return Under(linear, dark, "")
     tails = near[low].mean - dark, near[high].mean - dark
     if min(tails) <= 0:
-        return Under(linear, dark, f"{ion.label}: no tail above dark counts, background linear in m/z")
+        return Under(linear, dark, "no tail above dark counts, background is linear in m/z")
     factor = log_linear(*tails, share) / ((1.0 - share) * tails[0] + share * tails[1])
     return Under(dark + (linear - dark) * factor, dark, "")
 

@@ -61,10 +61,11 @@ class Groups:
 
 def align(seen: Observations, usable: NDArray[np.bool_], members: Sequence[str]) -> Cycles:
     """Find the cycles in which every member ion has a dwell, and which of them are unmarked."""
-    column: dict[int, int] = {}
-    for code, stop in enumerate(seen.stops):
-        if stop.kind == "ion" and stop.label in members and members.index(stop.label) not in column.values():
-            column[code] = members.index(stop.label)
+    column = {
+        code: members.index(stop.label)
+        for code, stop in enumerate(seen.stops)
+        if stop.kind == "ion" and stop.label in members
+    }
     rows: dict[tuple[int, int], list[int]] = {}
     for dwell, code in enumerate(seen.stop.tolist()):
         if code in column:

@@ -34,16 +34,16 @@ from controller.reduce.result import RatioResult, Reduction
 from controller.reduce.scatter import Scatter, Track, scatter, statistical_covariance
 
 BACKGROUND_COUNTING = "background counting"
+NEGLIGIBLE = 1e-9  # of u: below this a component is rounding, not an influence
 NO_VALUE = "No net signal in a denominator or in the normalising ratio: no value."
 
 
 def reduce_rows(
     rows: Iterable[DetectorRow], sequence: Sequence, instrument: Instrument, ions: Masses
 ) -> Reduction:
-    """Ratios of a run. ``ions`` gives the mass in u of any label of the sequence.
+    """Ratios of a run. ``ions`` gives the neutral mass in u of any label of the sequence.
 
-    Raises ConfigRefused where a ratio names an ion that is not measured. A run with too few data
-    gives results that say so in their notes.
+    Never raises for want of data: a run with too few gives results that say so in their notes.
     """
     return _Reducer(collect(rows), sequence, instrument, ions).reduction()
 
@@ -131,7 +131,7 @@ class _Reducer:
     def _track(self, ratio: Ratio) -> Track:
         """Choose cycles, groups and interpolation weights."""
         cycles = align(self.seen, self.usable, ratio.members)
-        notes = [self.under_notes[ion] for ion in ratio.members if ion in self.under_notes]
+        notes: list[str] = []
         if cycles.incomplete:
             notes.append(f"{cycles.incomplete} incomplete cycles are not used.")
         if not len(cycles.dwells):
@@ -198,6 +198,9 @@ class _Reducer:
         told = sum(1 for marks, good in zip(self.seen.marks, self.usable, strict=True) if marks and good)
         if told:
             notes.append(f"{told} dwells are used although their station kept an older centre.")
+        for reason in dict.fromkeys(self.under_notes.values()):
+            ions = [ion for ion, why in self.under_notes.items() if why == reason]
+            notes.append(f"{', '.join(ions)}: {reason}.")
         if self.sequence.interferences and self.sequence.normalisation is None:
             notes.append("Isobars are subtracted without mass bias: the sequence has no normalisation.")
         return tuple(notes)
@@ -252,7 +255,7 @@ def _result(track: Track, found: Scatter | None, signed: Mapping[str, float]) ->
         coverage=total.coverage,
         dof=total.dof,
         u_statistical=found.u,
-        components={} if nothing else {name: abs(part) for name, part in signed.items() if part},
+        components={name: abs(part) for name, part in signed.items() if abs(part) > NEGLIGIBLE * total.u},
         groups=len(groups.keys) if groups else 0,
         cycles_used=int(groups.cycles.sum()) if groups else 0,
         cycles_marked=track.cycles.marked,

@@ -16,7 +16,6 @@ from typing import NamedTuple
 import numpy as np
 
 from controller.config.sequence import Sequence
-from controller.errors import ConfigRefused
 from controller.reduce.deadtime import Array
 from controller.reduce.interference import Isobar, resolve
 from controller.reduce.massbias import Normaliser, corrected
@@ -52,11 +51,7 @@ def isobar_input(on: str, interfering: str) -> str:
 
 
 def plan_ratios(sequence: Sequence, masses: Masses, inputs: Mapping[str, float]) -> list[Ratio]:
-    """All ratios of the sequence. ``inputs`` holds the present values of known ratios, by name.
-
-    Raises ConfigRefused where a ratio or correction names an ion that is not measured.
-    """
-    measured = {ion.ion for ion in sequence.ions}
+    """All ratios of the sequence. ``inputs`` holds the present values of known ratios, by name."""
 
     def mass(label: str) -> float:
         return masses[label] if isinstance(masses, Mapping) else masses(label)
@@ -73,18 +68,10 @@ def plan_ratios(sequence: Sequence, masses: Masses, inputs: Mapping[str, float])
         n, d = asked.numerator, asked.denominator
         normaliser = Normaliser(n, d, inputs["normalising ratio"], mass(n), mass(d))
     planned = []
-    for number, ratio in enumerate(sequence.ratios):
+    for ratio in sequence.ratios:
         n, d = ratio.numerator, ratio.denominator
         normalised = ratio.normalised and normaliser is not None
         members, needed = _members([n, d], isobars, normaliser, normalised)
-        missing = [ion for ion in members if ion not in measured]
-        if missing:
-            raise ConfigRefused(
-                f"needs the ion {missing[0]}, which is not measured",
-                file=sequence.title,
-                key=f"ratios[{number}]",
-                next_action="add the ion to [[ions]], or correct its label",
-            )
         law = normaliser if normalised or needed else None
         planned.append(
             Ratio(f"{n}/{d}", n, d, mass(n), mass(d), normalised, tuple(members), tuple(needed), law)

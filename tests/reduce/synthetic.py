@@ -65,7 +65,10 @@ def rows(plan: Plan, rng: np.random.Generator) -> list[DetectorRow]:
                 now += plan.settle
                 for _ in range(plan.gates):
                     seconds = stop.dwell / plan.gates
-                    found.append(_row(plan, stop, (block, cycle), (now, seconds), beam, rng))
+                    mean, middle = _mean(beam, now, seconds), now + seconds / 2
+                    rate = stop.rate(middle) if callable(stop.rate) else stop.rate
+                    total = _total(plan, stop, rate * mean + stop.constant, seconds, rng)
+                    found.append(_row(stop, block, cycle, now, seconds)._replace(total=total))
                     now += seconds
     return found
 
@@ -87,26 +90,28 @@ def _beam(plan: Plan, length: float, rng: np.random.Generator) -> np.ndarray:
     return np.concatenate([[0.0], np.cumsum(strength) * GRID])
 
 
-def _row(plan, stop, place, gate, beam, rng) -> DetectorRow:
-    begin, seconds = gate
-    grid = np.array([begin, begin + seconds]) / GRID
-    integral = np.diff(np.interp(grid, np.arange(len(beam)), beam))[0]
-    rate = stop.rate(begin + seconds / 2) if callable(stop.rate) else stop.rate
-    n = rate * integral / seconds + stop.constant
+def _mean(beam: np.ndarray, begin: float, seconds: float) -> float:
+    ends = np.interp(np.array([begin, begin + seconds]) / GRID, np.arange(len(beam)), beam)
+    return float(ends[1] - ends[0]) / seconds
+
+
+def _total(plan: Plan, stop: Stop, n: float, seconds: float, rng: np.random.Generator) -> float:
     if stop.detector == "counter":
         observed = n / (1 + n * plan.dead)
         if observed < 2000:
-            total = float(rng.poisson(observed * seconds))
-        else:
-            spread = math.sqrt(n * seconds / (1 + n * plan.dead) ** 3)
-            total = float(round(rng.normal(observed * seconds, spread)))
-    else:
-        ions = rng.normal(n * plan.gain * seconds, math.sqrt(n * plan.gain * seconds))
-        noise = math.sqrt(2 * 1.380649e-23 * plan.kelvin * plan.resistance / seconds) * rng.standard_normal()
-        total = ions * 1.602176634e-19 * plan.resistance + noise * seconds
+            return float(rng.poisson(observed * seconds))
+        spread = math.sqrt(n * seconds / (1 + n * plan.dead) ** 3)
+        return float(round(rng.normal(observed * seconds, spread)))
+    expected = n * plan.gain * seconds
+    ions = rng.normal(expected, math.sqrt(expected))
+    noise = math.sqrt(2 * 1.380649e-23 * plan.kelvin * plan.resistance / seconds) * rng.standard_normal()
+    return float(ions * 1.602176634e-19 * plan.resistance + noise * seconds)
+
+
+def _row(stop: Stop, block: int, cycle: int, begin: float, seconds: float) -> DetectorRow:
     return DetectorRow(
-        block=place[0],
-        cycle=place[1],
+        block=block,
+        cycle=cycle,
         station=stop.station,
         stop=stop.label,
         kind=stop.kind,
@@ -114,7 +119,7 @@ def _row(plan, stop, place, gate, beam, rng) -> DetectorRow:
         started_ns=round(begin * 1e9),
         ended_ns=round((begin + seconds) * 1e9),
         live_seconds=seconds,
-        total=total,
+        total=0.0,
         overrange=False,
         mass_to_charge=stop.mass_to_charge,
         accel_volts=8000.0,
