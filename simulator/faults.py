@@ -75,9 +75,12 @@ def _target(plant: Plant, twins: dict[str, Any], fault: ScheduledFault, name: st
     return twins[fault.role]
 
 
-def _frozen(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
-    twin = _target(plant, twins, fault, "frozen")
-    return lambda t: twin.freeze(), lambda t: setattr(twin, "frozen", None)
+def _misbehaves(word: str) -> Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change, Change]]:
+    def make(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+        twin = _target(plant, twins, fault, word)
+        return lambda t: twin.misbehave(**{word: True}), lambda t: twin.misbehave()
+
+    return make
 
 
 KINDS: dict[str, Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change, Change]]] = {
@@ -89,9 +92,9 @@ KINDS: dict[str, Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change,
     "arc": _arc,
     "output deviates": _attribute("deviation", lambda fault: fault.size or 0.05, 0.0),
     "output stuck": _attribute("stuck", lambda fault: True, False),
-    "reading frozen": _frozen,
-    "reading garbled": _attribute("garbled", lambda fault: True, False),
-    "no reply": _attribute("silent", lambda fault: True, False),
+    "reading frozen": _misbehaves("frozen"),
+    "reading garbled": _misbehaves("garbled"),
+    "no reply": _misbehaves("silent"),
 }
 
 

@@ -58,7 +58,7 @@ class Magnet:
         # what was done to the magnet before anybody watched is part of its truth
         past = self._model.start((float(rng.uniform(0.3, 1.0)) * spec.amps_max, 0.0))
         self._noise = Wander(rng, spec.noise, shortest=0.4, longest=30.0)
-        self._drift = Wander(rng, spec.drift_per_hour, shortest=900.0, longest=7200.0, waves=4)
+        self._drift = Wander(rng, spec.drift_per_hour, shortest=900.0, longest=7200.0)
         still = (0.0,) * len(self.eddy_seconds)
         self._segments = [Segment(0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, still, past)]
         self._starts = [0.0]
@@ -187,7 +187,7 @@ class Probe:
 
     def __init__(self, spec: MagnetSpec, rng: np.random.Generator) -> None:
         self.scale = spec.probe_scale_spread * float(rng.standard_normal())
-        self._wander = Wander(rng, 0.05 * spec.probe_scale_spread, shortest=1200.0, longest=7200.0, waves=4)
+        self._wander = Wander(rng, 0.05 * spec.probe_scale_spread, shortest=1200.0, longest=7200.0)
         self.noise = spec.probe_noise
 
     def reading(self, t: float, tesla: Callable[[float], float], normal: Callable[[], float]) -> float:

@@ -1,8 +1,8 @@
 """Random processes that are functions of time: whoever asks, in whatever order, gets the same answer.
 
 A process that remembered its last sample would make the truth depend on who observes it. So drifts and
-flickers are sums of sinusoids with seeded phases, spread over a band of frequencies in equal ratios
-(a 1/f-like spectrum). Only measurement noise is drawn in order, from blocks, one generator a device.
+flickers are drawn once, as a periodic table with a 1/f power spectrum between two periods, and looked
+up by straight lines. Only measurement noise is drawn in order, from blocks, one generator a device.
 """
 
 from __future__ import annotations
@@ -12,31 +12,32 @@ import math
 import numpy as np
 
 BLOCK = 1024
+TABLE = 4096  # points; a table repeats after TABLE / POINTS_PER_PERIOD of its shortest periods
+POINTS_PER_PERIOD = 4
 
 
 class Wander:
     """Zero-mean process of standard deviation ``rms`` with power between two periods, in s."""
 
-    def __init__(
-        self, rng: np.random.Generator, rms: float, *, shortest: float, longest: float, waves: int = 7
-    ) -> None:
-        spread = np.exp(rng.uniform(0.0, 1.0, waves)) / math.e
-        ratios = np.linspace(0.0, 1.0, waves)
-        periods = longest * (shortest / longest) ** ratios * spread
-        self._amplitude = rms * math.sqrt(2.0 / waves)
-        self._waves = tuple(
-            (2.0 * math.pi / float(period), float(phase))
-            for period, phase in zip(periods, rng.uniform(0.0, 2.0 * math.pi, waves), strict=True)
-        )
+    def __init__(self, rng: np.random.Generator, rms: float, *, shortest: float, longest: float) -> None:
+        self._per_second = POINTS_PER_PERIOD / shortest
+        frequency = np.fft.rfftfreq(TABLE, 1.0 / self._per_second)
+        inside = (frequency >= 1.0 / longest) & (frequency <= 1.0 / shortest)
+        amplitude = np.zeros(frequency.size)
+        amplitude[inside] = frequency[inside] ** -0.5
+        phase = rng.uniform(0.0, 2.0 * math.pi, frequency.size)
+        table = np.fft.irfft(amplitude * np.exp(1j * phase), TABLE)
+        self._table: list[float] = (rms * table / table.std()).tolist()
+        self._table.append(self._table[0])
+        self._still = rms == 0.0
 
     def __call__(self, t: float) -> float:
-        if self._amplitude == 0.0:
+        if self._still:
             return 0.0
-        sin = math.sin
-        total = 0.0
-        for rate, phase in self._waves:
-            total += sin(rate * t + phase)
-        return self._amplitude * total
+        place = t * self._per_second % TABLE
+        index = int(place)
+        here = self._table[index]
+        return here + (place - index) * (self._table[index + 1] - here)
 
 
 class Normals:

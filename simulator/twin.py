@@ -33,7 +33,8 @@ class Twin:
         self.garbled = False
         self.silent = False
         self._loss = plant.spec.late_reply, plant.spec.garbled_reply
-        self._lossy = any(self._loss)
+        # one flag for all ways of misbehaving: the good path is run many million times
+        self.misbehaving = self._loss != (0.0, 0.0)
         self._timeline = plant.timeline
 
     # --- the link's side -------------------------------------------------------------------------
@@ -48,19 +49,22 @@ class Twin:
         t = self.now()
         if t >= self._timeline.next:
             self._timeline.catch_up(t)
+        if self.misbehaving:
+            return self._misreport(t)
+        self.sequence += 1
+        return (self.sequence, self.status(t), self.values(t))
+
+    def _misreport(self, t: float) -> Any:
         if self.silent:
             return None
         self.sequence += 1
         if self.frozen is not None:
             return self.frozen
-        if self.garbled:
+        draw = float(self._rng.random())
+        if draw < self._loss[0]:
+            return None
+        if self.garbled or draw < self._loss[0] + self._loss[1]:
             return self._garbage()
-        if self._lossy:
-            draw = float(self._rng.random())
-            if draw < self._loss[0]:
-                return None
-            if draw < self._loss[0] + self._loss[1]:
-                return self._garbage()
         return (self.sequence, self.status(t), self.values(t))
 
     def command(self, verb: str, *values: float) -> Answer:
@@ -72,10 +76,12 @@ class Twin:
             return None
         return self.obey(t, verb, values)
 
-    def freeze(self) -> None:
-        """Repeat the present report for ever."""
+    def misbehave(self, *, frozen: bool = False, garbled: bool = False, silent: bool = False) -> None:
+        """Begin (or, with nothing named, end) to repeat the last report, to babble, or to be silent."""
         t = self.now()
-        self.frozen = (self.sequence, self.status(t), self.values(t))
+        self.frozen = (self.sequence, self.status(t), self.values(t)) if frozen else None
+        self.garbled, self.silent = garbled, silent
+        self.misbehaving = frozen or garbled or silent or self._loss != (0.0, 0.0)
 
     def _garbage(self) -> Any:
         choices: tuple[Any, ...] = (
@@ -115,12 +121,12 @@ class OutputTwin(Twin):
         self.maximum, self.slew = limits
         self.watchdog = 0.0
         self._heard = 0.0
+        self._watching = False
 
     def report(self) -> Any:
-        answer = super().report()
         if not self.silent:
             self._heard = self.now()
-        return answer
+        return super().report()
 
     def command(self, verb: str, *values: float) -> Answer:
         answer = super().command(verb, *values)
@@ -155,11 +161,13 @@ class OutputTwin(Twin):
         return (DONE,)
 
     def _arm(self) -> None:
-        if self.watchdog > 0 and self.is_on():
+        if self.watchdog > 0 and not self._watching and self.is_on():
+            self._watching = True
             self._timeline.add(self.now() + self.watchdog, self._watch)
 
     def _watch(self, t: float) -> None:
-        """Due a watchdog time after a command: off if nothing has been heard since."""
+        """Off if nothing has been heard for the watchdog's time; else look again when it would be due."""
+        self._watching = False
         if not self.is_on() or self.watchdog <= 0:
             return
         due = self._heard + self.watchdog
@@ -167,6 +175,7 @@ class OutputTwin(Twin):
             self.plant.log.add(t, f"{self.role} watchdog")
             self.turn_off(t)
         else:
+            self._watching = True
             self._timeline.add(due, self._watch)
 
     def apply(self, t: float, value: float) -> Answer:

@@ -142,14 +142,11 @@ class Field:
         window = settings.field_window
         amps_per_tesla = 1.0 / self._model.tesla_per_amp(self.amps)
         heard_ns = rig.clock.mono_ns()
-        # wake just after the tick that hears the probe; a wait for every tick would cost as much as a tick
         period_ns = round(rig.instrument.devices.probe.poll * NS)
-        wake_ns = heard_ns - heard_ns % period_ns + AFTER_TICK_NS
         while True:
-            wake_ns += period_ns
-            await rig.clock.sleep_until_ns(wake_ns)
             reading = rig.supervisor.snapshot.readings[self._probe]
             if reading.at_ns <= heard_ns or reading.quality is not Quality.GOOD:
+                await rig.supervisor.wait_tick()
                 continue
             heard_ns = reading.at_ns
             error = (reading.value - target) / target
@@ -163,6 +160,8 @@ class Field:
             self.state = FieldState(error, since, heard_ns)
             if abs(error) > DEAD_BAND * window:
                 await self._trim(-GAIN * error * target * amps_per_tesla)
+            # straight to the tick that will have heard the probe again
+            await rig.clock.sleep_until_ns(heard_ns + period_ns + AFTER_TICK_NS)
 
     async def _trim(self, step: float) -> None:
         settings = self._settings
