@@ -73,7 +73,7 @@ def rows(plan: Plan, rng: np.random.Generator) -> list[DetectorRow]:
     return found
 
 
-def _beam(plan: Plan, length: float, rng: np.random.Generator) -> np.ndarray:
+def _beam(plan: Plan, length: float, rng: np.random.Generator) -> list[float]:
     """Integral of the beam's strength from 0 to each point of the grid."""
     count = math.ceil(length / GRID) + 2
     u = (np.arange(count) + 0.5) * GRID / length
@@ -87,12 +87,16 @@ def _beam(plan: Plan, length: float, rng: np.random.Generator) -> np.ndarray:
             value = keep * value + kick
             noise[index] = value
         strength = strength * (1.0 + noise)
-    return np.concatenate([[0.0], np.cumsum(strength) * GRID])
+    return [0.0, *(np.cumsum(strength) * GRID).tolist()]
 
 
-def _mean(beam: np.ndarray, begin: float, seconds: float) -> float:
-    ends = np.interp(np.array([begin, begin + seconds]) / GRID, np.arange(len(beam)), beam)
-    return float(ends[1] - ends[0]) / seconds
+def _mean(beam: list[float], begin: float, seconds: float) -> float:
+    def integral(t: float) -> float:
+        index = int(t / GRID)
+        share = t / GRID - index
+        return (1 - share) * beam[index] + share * beam[index + 1]
+
+    return (integral(begin + seconds) - integral(begin)) / seconds
 
 
 def _total(plan: Plan, stop: Stop, n: float, seconds: float, rng: np.random.Generator) -> float:
