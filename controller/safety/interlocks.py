@@ -245,7 +245,7 @@ def _judge_track(limits: TrackLimits, track: Track, snapshot: Snapshot, causes: 
     left = _decayed(limits, track, at)
     value = reading.value * limits.scale
     if not believed or lowest - band <= value <= max(highest, left) + band:
-        return track._replace(out_ns=-1)
+        return track if track.out_ns < 0 else track._replace(out_ns=-1)
     below = value < lowest
     out = track.out_ns if track.out_ns >= 0 else at
     arc = below and limits.output in HIGH_VOLTAGE and value < 0.8 * lowest - band
