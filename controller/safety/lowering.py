@@ -24,7 +24,7 @@ from controller.safety.values import (
     usable,
 )
 from drivers.clock import Clock
-from drivers.contract import DeviceError
+from drivers.contract import DeviceError, Reading
 
 ATTEMPTS, PAUSE_SECONDS = 3, 0.1  # each command of the safe state: sent three times, 100 ms apart
 SLOPE_SHARE = 1.0 - 1e-9  # a ramp stays under its limit by more than any rounding
@@ -39,6 +39,12 @@ class Lowering:
         self._board, self._gateway, self._clock, self._wait_tick = board, gateway, clock, wait_tick
         self._tasks: dict[int, asyncio.Task[bool]] = {}
         self._effects: dict[int, Effect] = {}
+        # output -> its read-backs as last heard before it was switched off at once
+        self.off_from: dict[int, tuple[Reading, ...]] = {}
+
+    def forget(self) -> None:
+        """Forget where outputs were when they were switched off, after a reset."""
+        self.off_from.clear()
 
     def apply(self, output: int, effect: Effect) -> asyncio.Task[bool] | None:
         """Begin (or go on) bringing ``output`` to zero by ``effect``; None where the guard's refusal of
@@ -66,6 +72,9 @@ class Lowering:
     async def _off(self, output: int) -> bool:
         """Disable, then zero: the output is dead before its set-point is touched, so that what is then
         seen to decay is the bleeder alone."""
+        if self._board.latches.enabled[output]:
+            limits, readings = self._board.envelope.outputs[output], self._board.snapshot.readings
+            self.off_from[output] = tuple(readings[slot] for slot in limits.read_slots)
         disabled = await self._insist(output, Action.DISABLE)
         if not disabled and output == MAGNET:
             return await self._ramp(output)  # its current forbids an abrupt disconnection
@@ -76,18 +85,17 @@ class Lowering:
         board, limits = self._board, self._board.envelope.outputs[output]
         if isnan(board.latches.demands[output]) and not self._adopt(output):
             return False if output == MAGNET else await self._off(output)
-        deadline = self._clock.mono_ns() + round(ramp_seconds(limits, board.latches.demands[output]) * NS)
+        last = self._clock.mono_ns()  # a long rest before the ramp buys no larger first step
+        deadline = last + round(ramp_seconds(limits, board.latches.demands[output]) * NS)
         while (demand := board.latches.demands[output]) > 0:
-            if self._clock.mono_ns() > deadline:
-                return False
-            since = board.latches.permitted_ns[output]
-            seconds = (self._clock.mono_ns() - since) / NS if since >= 0 else 0.0
-            room = min(limits.per_second * seconds * SLOPE_SHARE, limits.step)
-            if room > 0 or since < 0:
-                target = max(demand - (room if since >= 0 else limits.step), 0.0)
-                if not await self._insist(output, Action.WRITE, target):
-                    return False
             await self._wait_tick()
+            now = self._clock.mono_ns()
+            if now > deadline:
+                return False
+            room = min(limits.per_second * ((now - last) / NS) * SLOPE_SHARE, limits.step)
+            last = now
+            if not await self._insist(output, Action.WRITE, max(demand - room, 0.0)):
+                return False
         if output == MAGNET:
             await self._wait_for_current(deadline)
         return await self._insist(output, Action.DISABLE)

@@ -162,6 +162,10 @@ class Parking:
         safe value. The problem or "", and the samples per slot."""
         limits, since = self._board.envelope.outputs[output], self._clock.mono_ns()
         samples: dict[int, Heard] = {slot: [] for slot in limits.read_slots}
+        # a decay begins where the output was when it was switched off at once
+        for slot, reading in zip(limits.read_slots, self._lowering.off_from.pop(output, ()), strict=False):
+            if usable(reading, reading.at_ns, limits.stale_ns):
+                samples[slot].append((reading.at_ns, reading.value))
         while not all(settled(limits, tuple(each)) for each in samples.values()):
             if self._clock.mono_ns() > since + round(seconds * NS):
                 return self._not_settled(output), samples
@@ -271,7 +275,7 @@ class Parking:
             reading = self._board.snapshot.readings[slot]
             if not usable(reading, now, limits.stale_ns):
                 heard.clear()  # a gap in the evidence begins it again
-            elif reading.at_ns > (heard[-1][0] if heard else since):
+            elif reading.at_ns > max(since, heard[-1][0] if heard else -1):
                 heard.append((reading.at_ns, reading.value))
 
     def _status_off(self, output: int) -> bool | None:

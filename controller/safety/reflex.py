@@ -57,6 +57,7 @@ class Reflex:
     def clear(self) -> None:
         """Forget what was applied, after a reset."""
         self._applied = NOTHING
+        self._lowering.forget()
 
     def act(self, present: tuple[Cause, ...], at_ns: int) -> tuple[Cause, ...]:
         """Latch what is new and do what all causes together ask for.

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping
+from math import nan
 from typing import NamedTuple
 
 from controller.config.instrument import Instrument
@@ -53,7 +54,8 @@ class Sampler:
         self._readings: list[Reading] = [
             reading for monitor in monitors.values() for reading in monitor.latest()
         ]
-        self._blank: list[float | None] = [None] * slot
+        # nan is stored as nothing, and binds to the database without the search that a None starts
+        self._blank: list[float | None] = [nan] * slot
         self._not_good: dict[str, str] = {}  # channel -> why, as last noted
 
     def poll_all(self) -> None:
