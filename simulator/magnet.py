@@ -63,7 +63,9 @@ class Magnet:
         self._segments = [Segment(0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, still, past)]
         self._starts = [0.0]
         self.enabled = False
-        self._held: tuple[Segment, float] | None = None
+        self._eddy = tuple(zip(self.eddy_amplitudes, (-1.0 / s for s in self.eddy_seconds), strict=True))
+        # of the segment that holds: static field, and each mode's amplitude (in A) at its end
+        self._held: tuple[Segment, float, tuple[float, ...]] | None = None
 
     # --- commands --------------------------------------------------------------------------------
 
@@ -122,26 +124,37 @@ class Magnet:
     def tesla(self, t: float) -> float:
         """Field in the gap in T."""
         segment = self.segment(t)
-        static = self._static(segment, t)
         lag = 0.0
-        for amplitude, x in zip(self.eddy_amplitudes, self._modes_in(segment, t), strict=True):
-            lag += amplitude * x
+        if t >= segment.end:
+            held = self._held
+            if held is None or held[0] is not segment:
+                held = self._held = self._hold(segment)
+            static, age = held[1], t - segment.end
+            for (_, rate), x in zip(self._eddy, held[2], strict=True):
+                lag += x * math.exp(rate * age)
+        else:
+            static = self._static(segment, t)
+            for amplitude, x in zip(self.eddy_amplitudes, self._modes_in(segment, t), strict=True):
+                lag += amplitude * x
         field = static - self.spec.initial_tesla_per_amp * lag
         return field * (1.0 + self._noise(t) + self._drift(t))
 
+    def _hold(self, segment: Segment) -> tuple[Segment, float, tuple[float, ...]]:
+        modes = self._modes_in(segment, segment.end)
+        return (
+            segment,
+            self._static(segment, segment.end),
+            tuple(a * x for a, x in zip(self.eddy_amplitudes, modes, strict=True)),
+        )
+
     def _static(self, segment: Segment, t: float) -> float:
-        """Field without lag; remembered while the current holds."""
-        if self._held is not None and self._held[0] is segment and t >= segment.end:
-            return self._held[1]
+        """Field without lag."""
         amps = self._amps_in(segment, t)
         spec = self.spec
         history = self._model.advance(segment.history, amps)
-        static = self.law_scale * spec.saturation * math.tanh(
+        return self.law_scale * spec.saturation * math.tanh(
             spec.initial_tesla_per_amp * amps / spec.saturation
         ) + self.loop_tesla * self._model.output(history)
-        if t >= segment.end:
-            self._held = (segment, static)
-        return static
 
     def _amps_in(self, segment: Segment, t: float) -> float:
         if t >= segment.end:

@@ -26,7 +26,9 @@ from drivers.contract import Quality
 # without lag; the eddy modes lend about 3 % of each step late, so half is fast and does not ring
 # (chosen on the simulated plant; common practice, no source).
 GAIN = 0.5
-# Below this part of the window the current is left alone, so that probe noise is not written to it.
+# Inside the window the error is averaged over about this many readings before it is acted on, and left
+# alone below this part of the window, so that the probe's noise is not written to the magnet.
+READINGS_AVERAGED = 4
 DEAD_BAND = 0.2
 AFTER_TICK_NS = 1_000_000
 
@@ -141,7 +143,7 @@ class Field:
         rig, settings, target = self._rig, self._settings, self._target
         window = settings.field_window
         amps_per_tesla = 1.0 / self._model.tesla_per_amp(self.amps)
-        heard_ns = rig.clock.mono_ns()
+        heard_ns, smooth = rig.clock.mono_ns(), 0.0
         period_ns = round(rig.instrument.devices.probe.poll * NS)
         while True:
             reading = rig.supervisor.snapshot.readings[self._probe]
@@ -158,8 +160,14 @@ class Field:
             elif since < 0:
                 since = heard_ns
             self.state = FieldState(error, since, heard_ns)
-            if abs(error) > DEAD_BAND * window:
+            if since < 0:
+                smooth = 0.0
                 await self._trim(-GAIN * error * target * amps_per_tesla)
+            else:
+                smooth += (error - smooth) / READINGS_AVERAGED
+                if abs(smooth) > DEAD_BAND * window:
+                    await self._trim(-smooth * target * amps_per_tesla)
+                    smooth = 0.0
             # straight to the tick that will have heard the probe again
             await rig.clock.sleep_until_ns(heard_ns + period_ns + AFTER_TICK_NS)
 
