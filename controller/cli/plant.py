@@ -110,7 +110,9 @@ def plant_spec(instrument: Instrument) -> PlantSpec:
         ),
         identities={
             role: (device.model, device.serial)
-            for role, device in ((r, getattr(instrument.devices, r)) for r in type(instrument.devices).model_fields)
+            for role, device in (
+                (r, getattr(instrument.devices, r)) for r in type(instrument.devices).model_fields
+            )
         },
         nominal_volts=instrument.accelerating.nominal,
         late_reply=simulation.late_reply,

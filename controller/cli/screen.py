@@ -126,3 +126,8 @@ class Progress:
             f" {visit.station.name} {visit.stop.label}: {100 * (visit.number + 1) / itinerary.total:.0f} %,"
             f" {duration(left)} left, ends {finish}{speed}"
         )
+
+
+def counted(number: int, noun: str) -> str:
+    """``1 station``, ``3 stations``."""
+    return f"{number} {noun}" if number == 1 else f"{number} {noun}s"

@@ -51,9 +51,7 @@ class Ended:
     requests: Mapping[str, int] = field(default_factory=dict)
 
 
-def open_all(
-    instrument: Instrument, world: World | None, now_ns: Callable[[], int]
-) -> dict[str, Opened]:
+def open_all(instrument: Instrument, world: World | None, now_ns: Callable[[], int]) -> dict[str, Opened]:
     """Every device of the instrument file. Raises DeviceUnreachable."""
     opened = {}
     for role in ROLES:
@@ -74,9 +72,7 @@ def _link(role: str, address: str, world: World | None) -> Link:
     raise DeviceAbsent(role, f"no link for the address {address!r}; this version knows sim:<role>")
 
 
-def conduct(
-    job: Job, *, record: Path, seed: int, virtual: bool, screen: Screen
-) -> Ended:
+def conduct(job: Job, *, record: Path, seed: int, virtual: bool, screen: Screen) -> Ended:
     """Run a job to its end, parked, with its record closed and reduced. Raises TrackfieldError."""
     with asyncio.Runner(loop_factory=VirtualLoop if virtual else None) as runner:
         ended = runner.run(_conduct(job, record=record, seed=seed, virtual=virtual, screen=screen))

@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 
 from controller.config.instrument import HighVoltageSettings
-from controller.run.rig import Refused, Rig
+from controller.run.rig import Rig
 from controller.safety.values import Action
 from drivers.clock import NS
 
