@@ -18,9 +18,11 @@ def main() -> int:
         found = module.measure()
         for figure in found:
             verdict = "met" if figure.met else "NOT MET"
-            print(f"  {figure.name}: {figure.ours}; {figure.against}; {figure.ratio}; goal {figure.goal}: {verdict}")
+            measured = f"{figure.ours}; {figure.against}; {figure.ratio}"
+            print(f"  {figure.name}: {measured}; goal {figure.goal}: {verdict}")
         figures += found
-    machine = f"Python {platform.python_version()}, {platform.system()} {platform.machine()}, {os.cpu_count()} cores"
+    python, system = platform.python_version(), f"{platform.system()} {platform.machine()}"
+    machine = f"Python {python}, {system}, {os.cpu_count()} cores"
     Path(__file__).with_name("results.md").write_text(page(figures, machine), encoding="utf-8")
     print("written to benchmarks/results.md")
     return 0 if all(figure.met for figure in figures) else 1

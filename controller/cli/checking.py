@@ -118,8 +118,9 @@ def forecast_job(job: Job, screen: Screen) -> int:
 
 def show_forecast(job: Job, expected: Forecast, screen: Screen) -> None:
     run = job.sequence.settings.run
+    stations, stops = len(job.route.stations), len(job.route.stops)
     screen.say(
-        f"{job.sequence.settings.title}: {counted(len(job.route.stations), 'station')}, {counted(len(job.route.stops), 'stop')}, "
+        f"{job.sequence.settings.title}: {counted(stations, 'station')}, {counted(stops, 'stop')}, "
         f"{counted(run.blocks, 'block')} of {counted(run.cycles_per_block, 'cycle')}"
     )
     screen.say(

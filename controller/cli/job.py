@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 from controller.config.faults import Faults
 from controller.config.instrument import Instrument
@@ -24,17 +25,15 @@ class Job:
     faults: Loaded[Faults] | None
     route: Route
 
-    def files(self) -> list[tuple[str, Loaded[object]]]:
-        """(role, file) of every file that was read, for the record."""
-        found: list[tuple[str, Loaded[object]]] = [
-            ("sequence", self.sequence),  # type: ignore[list-item]
-            ("instrument", self.instrument),  # type: ignore[list-item]
-        ]
-        if self.sample is not None:
-            found.append(("sample", self.sample))  # type: ignore[arg-type]
-        if self.faults is not None:
-            found.append(("faults", self.faults))  # type: ignore[arg-type]
-        return found
+    def files(self) -> list[tuple[str, str, str]]:
+        """(role, path, text) of every file that was read, for the record."""
+        named: dict[str, Loaded[Any] | None] = {
+            "sequence": self.sequence,
+            "instrument": self.instrument,
+            "sample": self.sample,
+            "faults": self.faults,
+        }
+        return [(role, loaded.path, loaded.text) for role, loaded in named.items() if loaded is not None]
 
 
 def load_job(

@@ -93,7 +93,8 @@ def _show_verdict(reduction: Reduction, truth: dict[str, float], screen: Screen)
         return
     inside = sum(abs(result.value - truth[result.name]) <= result.expanded for result in known)
     screen.say(
-        f"truth inside the 95 % interval: {inside} of {len(known)} ratios (one in twenty falls outside by design)"
+        f"truth inside the 95 % interval: {inside} of {len(known)} ratios "
+        "(one in twenty falls outside by design)"
     )
 
 

@@ -119,8 +119,8 @@ async def _run(
     started: float,
 ) -> Ended:
     instrument, sequence = job.instrument.settings, job.sequence.settings
-    for role, loaded in job.files():
-        journal.file(role, loaded.path, loaded.text)
+    for role, path, text in job.files():
+        journal.file(role, path, text)
     if world is not None:
         _write_truth(journal, job, world)
     supervisor, gateway = assemble(instrument, opened, clock, journal)

@@ -38,10 +38,10 @@ class Settings(BaseModel):
 
 
 @cache
-def _registry() -> UnitRegistry[Any]:
+def _registry() -> UnitRegistry:
     from pint import UnitRegistry  # noqa: PLC0415 - a quarter of a second; only needed with a file
 
-    registry: UnitRegistry[Any] = UnitRegistry(autoconvert_offset_to_baseunit=True)
+    registry: UnitRegistry = UnitRegistry(autoconvert_offset_to_baseunit=True)
     registry.define("ppb = 1e-9")
     return registry
 

@@ -41,7 +41,8 @@ def table() -> str:
 
 
 def page() -> str:
-    return f"{HEAD}```mermaid\n{mermaid()}\n```\n\n## Every state and event\n\nA dash is refused, and leaves the state unchanged.\n\n{table()}\n"
+    second = "## Every state and event\n\nA dash is refused, and leaves the state unchanged."
+    return f"{HEAD}```mermaid\n{mermaid()}\n```\n\n{second}\n\n{table()}\n"
 
 
 if __name__ == "__main__":

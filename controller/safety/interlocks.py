@@ -44,6 +44,7 @@ from drivers.contract import Quality, Reading
 NONE, BLOCK, HOLD, RAMP, OFF = Effect
 NS = 1_000_000_000
 FOREVER = 2**62
+NEAR = 0.125  # of the band: what a regulator trims must not cost a slow pass at every tick
 
 
 class Row(NamedTuple):
@@ -96,6 +97,7 @@ class Track(NamedTuple):
     stale_ns: int
     output: int
     demand: float
+    near: float  # a demand that has moved by no more is the same demand
     until_ns: int  # end of the window under way
     low: float
     high: float
@@ -114,21 +116,24 @@ class Memory(NamedTuple):
     held: tuple[int, ...]
     bad: tuple[int, ...]
     tracks: tuple[Track, ...]
-    edges: tuple[tuple[int, int, int, float, int, float, float], ...]  # the tracks' head, as plain tuples
+    edges: tuple[tuple[int, int, int, float, float, int, float, float], ...]  # the tracks, for speed
     calm: bool  # all held, nothing pending
 
 
 def fresh_memory(envelope: Envelope) -> Memory:
     """The memory before the first tick: nothing holds yet."""
     none = (-1,) * len(envelope.bounds)
-    track = Track(0, 0, 0, nan, 0, -inf, inf, nan, nan, nan, nan, 0.0, 0, -1)
+    track = Track(0, 0, 0, nan, 0.0, 0, -inf, inf, nan, nan, nan, nan, 0.0, 0, -1)
     tracks = tuple(track._replace(slot=t.slot, stale_ns=t.stale_ns, output=t.output) for t in envelope.tracks)
     return _memory(none, none, tracks)
 
 
 def _memory(held: tuple[int, ...], bad: tuple[int, ...], tracks: tuple[Track, ...]) -> Memory:
     calm = -1 not in held and max(bad) < 0 and all(track.out_ns < 0 for track in tracks)
-    edges = tuple((t.slot, t.stale_ns, t.output, t.demand, t.until_ns, t.low, t.high) for t in tracks)
+    edges = tuple(
+        (t.slot, t.stale_ns, t.output, t.demand - t.near, t.demand + t.near, t.until_ns, t.low, t.high)
+        for t in tracks
+    )
     return Memory(held, bad, tracks, edges, calm)
 
 
@@ -145,29 +150,13 @@ def judge_tick(envelope: Envelope, snapshot: Snapshot, memory: Memory) -> tuple[
         reading = readings[slot]
         if reading[1] or reading[0] not in HEALTHY:
             return judge_closely(envelope, snapshot, memory)
-    for slot, stale, output, demand, until, low, high in memory.edges:
+    for slot, stale, output, least, most, until, low, high in memory.edges:
         reading = readings[slot]
         if reading[1] or not low <= reading[0] <= high or not 0 <= at - reading[2] <= stale:
             return judge_closely(envelope, snapshot, memory)
-        if demand != demands[output] or at >= until:
-            return _judge_moved(envelope, snapshot, memory)
+        if not least <= demands[output] <= most or at >= until:
+            return judge_closely(envelope, snapshot, memory)
     return memory, ()
-
-
-def _judge_moved(envelope: Envelope, snapshot: Snapshot, memory: Memory) -> tuple[Memory, tuple[Cause, ...]]:
-    """All is well but for demands that have moved: only their tracks are judged."""
-    causes: list[Cause] = []
-    at, demands, tracks = snapshot.at_ns, snapshot.demands, list(memory.tracks)
-    for number, track in enumerate(tracks):
-        if track.demand != demands[track.output] or at >= track.until_ns:
-            tracks[number] = _judge_track(envelope.tracks[number], track, snapshot, causes)
-            if causes or tracks[number].out_ns >= 0:
-                return judge_closely(envelope, snapshot, memory)
-        else:
-            reading = snapshot.readings[track.slot]
-            if not usable(reading, at, track.stale_ns) or not track.low <= reading.value <= track.high:
-                return judge_closely(envelope, snapshot, memory)
-    return _memory(memory.held, memory.bad, tuple(tracks)), ()
 
 
 def judge_closely(envelope: Envelope, snapshot: Snapshot, memory: Memory) -> tuple[Memory, tuple[Cause, ...]]:
@@ -264,7 +253,7 @@ def _judge_track(limits: TrackLimits, track: Track, snapshot: Snapshot, causes: 
 
 def _follow(limits: TrackLimits, track: Track, at: int, demand: float) -> Track:
     """Take a new demand or a new window into the track's extremes."""
-    if track.demand == demand and at < track.until_ns:
+    if abs(demand - track.demand) <= track.near and at < track.until_ns:
         return track
     old, new = (track.old_low, track.old_high), (track.new_low, track.new_high)
     until, fell_from, fell_ns = track.until_ns, track.fell_from, track.fell_ns
@@ -285,7 +274,7 @@ def _follow(limits: TrackLimits, track: Track, at: int, demand: float) -> Track:
     band = _band(limits, max(abs(lowest), abs(highest)))
     edges = (lowest - band) / limits.scale, (highest + band) / limits.scale
     return Track(
-        track.slot, track.stale_ns, track.output, demand, until, min(edges), max(edges),
+        track.slot, track.stale_ns, track.output, demand, limits.band * NEAR, until, min(edges), max(edges),
         *old, *new, fell_from, fell_ns, track.out_ns,
     )  # fmt: skip
 

@@ -7,12 +7,15 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping
+from math import lcm
 from math import nan
 from typing import NamedTuple
 
 from controller.config.instrument import Instrument
 from controller.safety.interlocks import NS
 from drivers.contract import Channel, Monitor, Reading
+
+PLAN_MAX = 4096  # ticks
 
 
 class _Device:
@@ -50,7 +53,10 @@ class Sampler:
             # offsets spread devices of equal period over different ticks
             self._devices.append(_Device(monitor, slot, every, number % every))
             slot = self._devices[-1].stop
-        self._polls = [(device.every, device.offset, device.poll) for device in self._devices]
+        self._cycle = lcm(*(device.every for device in self._devices))
+        # who is due, per tick of the cycle; a cycle too long for a table is worked out as it goes
+        self._plan = [self._due(number) for number in range(self._cycle)] if self._cycle <= PLAN_MAX else []
+        self._expected: list[_Device] = []  # asked, and not heard since
         self._readings: list[Reading] = [
             reading for monitor in monitors.values() for reading in monitor.latest()
         ]
@@ -58,24 +64,32 @@ class Sampler:
         self._blank: list[float | None] = [nan] * slot
         self._not_good: dict[str, str] = {}  # channel -> why, as last noted
 
+    def _due(self, number: int) -> list[_Device]:
+        return [device for device in self._devices if not (number - device.offset) % device.every]
+
     def poll_all(self) -> None:
         """Ask every device once, before the first tick."""
         for device in self._devices:
             device.poll()
+        self._expected = self._devices.copy()
 
     def poll(self, number: int) -> None:
         """Ask the devices that are due at tick ``number``."""
-        for every, offset, poll in self._polls:
-            if not (number - offset) % every:
-                poll()
+        expected = self._expected
+        for device in self._plan[number % self._cycle] if self._plan else self._due(number):
+            device.poll()
+            if device not in expected:
+                expected.append(device)
 
     def collect(self, at_ns: int) -> Sample:
         """Take in what has been heard."""
         readings, values, not_good = self._readings, self._blank.copy(), self._not_good
         notes: dict[str, object] | None = None
-        for device in self._devices:
+        silent: list[_Device] = []
+        for device in self._expected:
             heard = device.latest()
             if heard is device.seen:
+                silent.append(device)
                 continue
             device.seen = heard
             slot = device.start
@@ -88,6 +102,7 @@ class Sampler:
                 slot += 1
             if at_ns - reading[2] > self._tick_ns:
                 notes = {**(notes or {}), reading[3].partition(".")[0]: {"heard_ns": reading[2]}}
+        self._expected = silent
         return Sample(tuple(readings), values, json.dumps(notes) if notes else None)
 
     def _quality(self, notes: dict[str, object] | None, reading: Reading) -> dict[str, object] | None:

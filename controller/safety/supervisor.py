@@ -218,7 +218,8 @@ class Supervisor:
                     asyncio.get_running_loop().call_soon(self._conclude, sample, late, new)
                     return
         except Exception as error:  # noqa: BLE001 - the boundary: row 12b, and the watchdog starves
-            self._failed(error)
+            self.internal_fault(f"{type(error).__name__}: {error} in the tick")
+            self._next()
             return
         self._conclude(sample, late, ())
 
@@ -226,17 +227,11 @@ class Supervisor:
         try:
             for cause in new:
                 self._reflex.say(cause)
-            at = self._board.snapshot[1]
-            self._journal.telemetry(self._number, at, sample[1], sample[2])
-            if late <= self._tick_ns and self._watchdog is not None:
+            self._journal.telemetry(self._number, self._board.snapshot[1], sample[1], sample[2])
+            if self._watchdog is not None and late <= self._tick_ns:
                 self._watchdog()
         except Exception as error:  # noqa: BLE001 - the boundary: row 12b, and the watchdog starves
-            self._failed(error)
-            return
-        self._next()
-
-    def _failed(self, error: Exception) -> None:
-        self.internal_fault(f"{type(error).__name__}: {error} in the tick")
+            self.internal_fault(f"{type(error).__name__}: {error} at the end of the tick")
         self._next()
 
     def _next(self) -> None:
