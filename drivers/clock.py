@@ -81,13 +81,19 @@ class Clock:
         self.virtual = virtual
         self._loop = asyncio.get_running_loop()
         self._time = self._loop.time  # bound once: this is read several times per tick
+        self._last_time, self._last_ns = -1.0, 0
         self._zero = 0.0 if virtual else self._loop.time()
         self._wall_start = wall_start or datetime.now(UTC)
         self._last, self._last_ns = math.nan, 0
 
     def mono_ns(self) -> int:
         """Nanoseconds since the clock was made."""
-        return round((self._time() - self._zero) * NS)
+        now = self._time()
+        if now == self._last_time:  # in virtual time a whole tick happens at one instant
+            return self._last_ns
+        self._last_time = now
+        self._last_ns = answer = round((now - self._zero) * NS)
+        return answer
 
     def seconds(self) -> float:
         """The same in seconds, for the simulated plant."""

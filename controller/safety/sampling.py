@@ -7,8 +7,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping
-from math import lcm
-from math import nan
+from math import lcm, nan
 from typing import NamedTuple
 
 from controller.config.instrument import Instrument
