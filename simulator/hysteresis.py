@@ -11,9 +11,9 @@ congruency property (Mayergoyz). Jiles-Atherton: the 1986 differential form with
 from __future__ import annotations
 
 import math
-from typing import Protocol
+from typing import Any, Protocol
 
-State = tuple[float, ...]
+State = tuple[Any, ...]
 FLOOR = -math.inf
 
 
@@ -26,51 +26,43 @@ class Hysteresis(Protocol):
 
 
 class Preisach:
-    """Inputs in units of ``sigma`` after division; the state ends with the present input."""
+    """A state is the present input with its turning points behind it, as a chain of immutable links
+    (input, F(input), output, link before). A step costs one F, however long the memory."""
 
     def __init__(self, sigma: float) -> None:
         self._sigma = sigma
 
     def start(self, memory: tuple[float, ...] = (0.0,)) -> State:
         """From negative saturation through the inputs of ``memory``."""
-        state: State = (FLOOR,)
+        state: State = (FLOOR, 0.0, -1.0, None)
         for u in memory:
             state = self.advance(state, u)
         return state
 
     def advance(self, state: State, u: float) -> State:
-        last = state[-1]
+        last, before = state[0], state[3]
         if u == last:
             return state
-        points = list(state)
         rising = u > last
-        if len(points) > 1 and (last > points[-2]) is rising:
-            points.pop()  # the same branch goes on: the present input was no turning point
-        # wiping-out: a turning point is forgotten once the input passes its predecessor's other side
-        while len(points) > 2 and (u >= points[-2] if rising else u <= points[-2]):
-            del points[-2:]
-        points.append(u)
-        return tuple(points)
+        # where the same branch goes on, the present input was no turning point
+        base = before if before is not None and (last > before[0]) is rising else state
+        # wiping-out: a pair of turning points is forgotten once the input passes the outer one
+        while (outer := base[3]) is not None and outer[3] is not None:
+            if (u < outer[0]) if rising else (u > outer[0]):
+                break
+            base = outer[3]
+        x = u / self._sigma
+        share = 1.0 / (1.0 + math.exp(-x)) if x > -700.0 else 0.0
+        step = share - base[1]
+        # the Everett function of a branch, twice, with the branch's sign
+        return (u, share, base[2] + 2.0 * step * abs(step), base)
 
     def output(self, state: State) -> float:
-        before, total = 0.0, -1.0
-        for u in state[1:]:
-            here = self._cumulative(u)
-            step = here - before
-            total += 2.0 * step * abs(step)
-            before = here
-        return total
-
-    def _cumulative(self, u: float) -> float:
-        x = u / self._sigma
-        if x >= 0:
-            return 1.0 / (1.0 + math.exp(-x))
-        e = math.exp(x)
-        return e / (1.0 + e)
+        return float(state[2])
 
 
 class JilesAtherton:
-    """State (input, magnetisation); field = input * field_per_input, in A/m.
+    """State (input, magnetisation); field in A/m = input * field_per_input.
 
     dM/dH = (1/(1+c)) (Man - M)/(k s - alpha (Man - M)) + (c/(1+c)) dMan/dH, s the sign of dH, the first
     term zero while it would point against the change (clamp). The output is the magnetisation less its
@@ -99,7 +91,7 @@ class JilesAtherton:
 
     def magnetisation(self, state: State) -> float:
         """Magnetisation in A/m."""
-        return state[1]
+        return float(state[1])
 
     def advance(self, state: State, u: float) -> State:
         h0, m = state[0] * self._per_input, state[1]
@@ -122,7 +114,7 @@ class JilesAtherton:
         anhysteretic = self._ms * _langevin(h / self._a)
         for _ in range(8):
             anhysteretic = self._ms * _langevin((h + self._alpha * anhysteretic) / self._a)
-        return (m - anhysteretic) * self._scale
+        return float((m - anhysteretic) * self._scale)
 
     def _slope(self, h: float, m: float, sign: float) -> float:
         x = (h + self._alpha * m) / self._a
