@@ -54,7 +54,8 @@ def parse_quantity(text: str, unit: str) -> float:
     number, _, suffix = text.strip().partition(" ")
     try:
         magnitude = float(number)
-        given = registry.Quantity(magnitude, suffix.strip() or "dimensionless")
+        unit_text = suffix.strip() or "dimensionless"
+        given = registry.Quantity(magnitude, f"1{unit_text}" if unit_text.startswith("/") else unit_text)
         value = float(given.to(unit).magnitude)
     except pint.DimensionalityError:
         raise ValueError(f"{text!r} is not a quantity in {unit}") from None

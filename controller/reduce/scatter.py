@@ -19,6 +19,10 @@ from controller.reduce.observations import Observations
 from controller.reduce.ratios import Ratio, evaluate, sensitivities
 from controller.reduce.result import GroupPoint
 
+# With fewer groups their scatter is too uncertain to undercut counting statistics (its own relative
+# uncertainty is 1/sqrt(2(n-1)), above a quarter here); the rule is fixed, and a note says when it acts.
+GROUPS_MIN = 8
+
 
 @dataclass(frozen=True, slots=True)
 class Track:
@@ -104,7 +108,16 @@ def _u(
     factor = statistics.inflation(rho, len(away))
     if factor > 1:
         notes.append(f"Groups are correlated: standard error multiplied by {factor:.2f}.")
-    return factor * statistics.weighted_mean_error(away, weights), len(away) - 1.0
+    observed = factor * statistics.weighted_mean_error(away, weights)
+    counted = math.sqrt(float(weights**2 @ counting)) / float(weights.sum())
+    if len(away) < GROUPS_MIN and observed < counted:
+        # so few groups agree better than counting allows by luck alone, and often
+        notes.append(
+            f"Only {len(away)} groups, and they scatter less than counting statistics: "
+            "u is that of counting statistics."
+        )
+        return counted, math.inf
+    return observed, len(away) - 1.0
 
 
 def _uncounted(track: Track, seen: Observations, variances: Array, slopes: Array, notes: list[str]) -> float:

@@ -50,7 +50,7 @@ def _one(data, settings=None, instrument=None):
 def test_drift_of_the_degree_asked_for_leaves_nothing(degree):
     settings = _settings(reduction={"cycles_per_group": 4, "drift_degree": degree})
     curve = 3e-5 if degree == 2 else 0.0
-    result = _one(_exact(lambda t: t + 0.01 * t**2 + curve * t**3), settings)
+    result = _one(_exact(lambda t: t + 0.01 * t**2 + curve * t**3, blocks=4), settings)
     assert result.value == pytest.approx(0.5, rel=1e-10)
     assert result.u_statistical < 1e-10
     left_alone = _one(
