@@ -2,9 +2,11 @@
 
 The rule for the statistical uncertainty, fixed before any run: the standard error of the weighted
 mean of group values; multiplied by sqrt((1 + rho)/(1 - rho)) when the lag-1 autocorrelation rho of
-the groups stands more than 2/sqrt(groups) above zero (an AR(1) series; a white one is left alone). It
-is never replaced by the counting uncertainty when that happens to be larger or smaller: the reduced
-chi-squared says which, for a person to read. No value is rejected for being far from the others.
+the groups stands more than 2/sqrt(groups) above zero (an AR(1) series; a white one is left alone).
+From eight groups on it is never replaced by the counting uncertainty when that happens to be larger or
+smaller: the reduced chi-squared says which, for a person to read. With fewer groups counting
+statistics is its lower bound, and a note says when that acts (``scatter.py``). No value is rejected
+for being far from the others.
 """
 
 from __future__ import annotations
