@@ -163,6 +163,7 @@ class _Builder:
             below_ns=round(after / 2 * NS),
             above_ns=round(ABOVE_AFTER * NS),
             decay_ns=2.0 * settings.bleed_seconds * NS,
+            fall_per_ns=0.5 * settings.volts_per_second_max / NS,
             stale_ns=self._stale(name),
             below_row="6a",
             above_row="6b",
@@ -182,6 +183,7 @@ class _Builder:
             below_ns=round(MAGNET_DEVIATION_AFTER / 2 * NS),
             above_ns=round(MAGNET_DEVIATION_AFTER / 2 * NS),
             decay_ns=2.0 * settings.inductance / settings.resistance * NS,
+            fall_per_ns=0.5 * settings.amps_per_second_max / NS,
             stale_ns=self._stale(name),
             below_row="6a",
             above_row="6b",
@@ -190,7 +192,7 @@ class _Builder:
     def _gate(self, name: str, output: int, below: str, above: str) -> TrackLimits:
         window = round(GATE_WINDOW * NS)
         return TrackLimits(
-            name, output, self._slot(name), 1.0, 0.5, 0.0, window, window, window, 0.0,
+            name, output, self._slot(name), 1.0, 0.5, 0.0, window, window, window, 0.0, 0.0,
             self._stale(name), below, above,
         )  # fmt: skip
 

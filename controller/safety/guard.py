@@ -43,6 +43,7 @@ from controller.safety.values import (
     Trip,
     usable,
 )
+from drivers.contract import Reading
 
 Answer = Permit | Refusal | Trip
 LARGEST = 1e300  # beyond it arithmetic is no longer safe from infinity
@@ -91,9 +92,13 @@ def _disable(envelope: Envelope, snapshot: Snapshot, at: int) -> Answer:
     if usable(chain, at, stop.stale_ns) and chain.value < stop.trip_low:
         return Permit("the emergency stop has taken the supply away", chain.value, stop.trip_low)
     if not usable(amps, at, limits.stale_ns):
-        return Refusal("the magnet's current is not known", age_ns=at - amps.at_ns)
+        return Refusal("the magnet's current is not known", age_ns=_age(amps, at))
     answer = Permit if abs(amps.value) <= limits.safe else Refusal
-    return answer("current before disabling", amps.value, limits.safe, at - amps.at_ns)
+    return answer("current before disabling", amps.value, limits.safe, _age(amps, at))
+
+
+def _age(reading: Reading, at: int) -> int:
+    return at - reading.at_ns if reading.at_ns >= 0 else -1
 
 
 def _authority(latches: Latches, output: int) -> Answer | None:
@@ -111,7 +116,7 @@ def _conditions(envelope: Envelope, snapshot: Snapshot, latches: Latches, reques
     for number in limits.bounds:
         bound = envelope.bounds[number]
         reading = snapshot.readings[bound.slot]
-        age = at - reading.at_ns
+        age = _age(reading, at)
         strict = start or (output == DETECTOR and number == envelope.analyser_bound)
         low, high = (bound.permit_low, bound.permit_high) if strict else (bound.trip_low, bound.trip_high)
         good = usable(reading, at, bound.stale_ns)
@@ -131,7 +136,7 @@ def _conditions(envelope: Envelope, snapshot: Snapshot, latches: Latches, reques
     if limits.status_slot >= 0 and output in SUPPLIES:
         status = snapshot.readings[limits.status_slot]
         if not usable(status, at, limits.stale_ns) or status.value not in HEALTHY:
-            return Refusal(f"{request.output}.status", status.value, age_ns=at - status.at_ns)
+            return Refusal(f"{request.output}.status", status.value, age_ns=_age(status, at))
     return None
 
 
@@ -148,7 +153,7 @@ def _enable(envelope: Envelope, snapshot: Snapshot, latches: Latches, request: R
     if limits.set_slot >= 0:
         held = snapshot.readings[limits.set_slot]
         if not usable(held, request.at_ns, limits.stale_ns) or abs(held.value) > limits.safe:
-            age = request.at_ns - held.at_ns
+            age = _age(held, request.at_ns)
             return Refusal("the device does not hold set-point zero", held.value, limits.safe, age)
     if output in (*HIGH_VOLTAGE, SOURCE) and not latches.enabled[PERMIT]:
         return Refusal("the permit line is open")

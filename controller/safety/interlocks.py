@@ -8,7 +8,7 @@ Three kinds of condition are judged, each a compare on a slot of the snapshot:
   outside the outer (trip) range for the debounce time, what it guards is de-energised;
 * a *track*: a read-back must lie where its output's demand has been during the last one to two
   windows, within a band. So a ramp needs no timer that a steady stream of small set-points could hold
-  off for ever. A lowered output may lag behind by its own decay, at half the expected rate;
+  off for ever. A lowered output may lag behind by its own fall, at half the expected speed;
 * a *status*: a supply must be in remote control and not tripped.
 
 A value that is not usable violates its condition, and acts as the row that the sensor serves. A
@@ -284,10 +284,12 @@ def _band(limits: TrackLimits, demand: float) -> float:
 
 
 def _decayed(limits: TrackLimits, track: Track, at: int) -> float:
-    """The most that a slow but plausible decay can have left of what was there."""
+    """The most that a slow but plausible fall can have left of what was there: a decay through the
+    bleeder, or a supply that walks down at its own slope, each at half its speed."""
     if limits.decay_ns <= 0 or track.fell_from <= track.demand:
         return track.demand
-    return track.demand + (track.fell_from - track.demand) * exp(-(at - track.fell_ns) / limits.decay_ns)
+    since, height = at - track.fell_ns, track.fell_from - track.demand
+    return track.demand + max(height * exp(-since / limits.decay_ns), height - limits.fall_per_ns * since)
 
 
 def _unusable(source: str, serves: str, reading: Reading, at: int, stale_ns: int) -> Cause:

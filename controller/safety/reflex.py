@@ -14,7 +14,7 @@ from controller.record.journal import Journal
 from controller.safety.board import Board
 from controller.safety.interlocks import TABLE, effects_of, outranks
 from controller.safety.lowering import Lowering
-from controller.safety.safestate import latch
+from controller.safety.safestate import latch, unknown
 from controller.safety.values import (
     ACCELERATING,
     DETECTOR,
@@ -66,8 +66,7 @@ class Reflex:
         then lets each be said.
         """
         board = self._board
-        known = {cause.id for cause in board.latches.causes}
-        new = tuple(cause for cause in present if cause.id not in known)
+        new = unknown(board.latches, present)
         if new:
             # a stop does not latch, but it takes the start back like a trip
             board.replace(latch(board.latches, new)._replace(started=False))

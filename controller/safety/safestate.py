@@ -87,10 +87,15 @@ def ramp_seconds(limits: OutputLimits, demand: float) -> float:
     return 1.5 * abs(demand) / limits.per_second + 10.0
 
 
+def unknown(latches: Latches, causes: tuple[Cause, ...]) -> tuple[Cause, ...]:
+    """The causes that are not latched yet, once each."""
+    known = {cause.id for cause in latches.causes}
+    return tuple({cause.id: cause for cause in reversed(causes) if cause.id not in known}.values())[::-1]
+
+
 def latch(latches: Latches, causes: tuple[Cause, ...]) -> Latches:
     """Take new causes in: the first-out is frozen, later ones are listed once each, the start is lost."""
-    known = {cause.id for cause in latches.causes}
-    new = tuple(cause for cause in causes if cause.id not in known and TABLE[cause.row].latched)
+    new = tuple(cause for cause in unknown(latches, causes) if TABLE[cause.row].latched)
     if not new:
         return latches
     first = latches.first_out or min(new, key=lambda cause: PRIORITY[cause.row])

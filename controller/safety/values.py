@@ -177,7 +177,8 @@ class TrackLimits(NamedTuple):
     window_ns: int  # the demand's extremes are remembered for one to two windows
     below_ns: int  # outside for this long before it is a cause
     above_ns: int
-    decay_ns: float  # twice the expected decay constant once demanded lower: slower is not plausible
+    decay_ns: float  # twice the expected decay constant once demanded lower; 0: it does not decay
+    fall_per_ns: float  # half the slope at which a supply may walk down by itself
     stale_ns: int
     below_row: str
     above_row: str

@@ -167,13 +167,13 @@ class Journal:
     def telemetry(self, tick, at_ns, values, notes) -> None:
         self.telemetry_rows.append((tick, at_ns, list(values), notes))
 
-    def request(self, at_ns, output, action, value, verdict, reason, *compared) -> None:  # noqa: PLR0917
+    def request(self, at_ns, output, action, value, verdict, reason, *compared) -> None:
         self.lines.append(("request", at_ns, output, action, value, verdict, reason))
 
     def state(self, at_ns, source, event, target) -> None:
         self.lines.append(("state", at_ns, source, event, target))
 
-    def event(self, at_ns, severity, kind, source, text, data=None) -> None:  # noqa: PLR0917
+    def event(self, at_ns, severity, kind, source, text, data=None) -> None:
         self.lines.append(("event", at_ns, severity, kind, source, text))
 
     def reading(self, row) -> None:
