@@ -8,7 +8,7 @@ import gc
 import signal
 from collections import deque
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from types import FrameType
 
@@ -33,6 +33,7 @@ from drivers.registry import open_device
 from simulator.world import World
 
 VIRTUAL_START = "2000-01-01T00:00:00+00:00"  # wall time of every rehearsal, so that equal ones are equal
+REDUCED = (ExitCode.DONE, ExitCode.STOPPED, ExitCode.TRIPPED)
 SIGNALS = {signal.SIGINT: "stop", signal.SIGTERM: "stop", signal.SIGUSR1: "hold", signal.SIGUSR2: "resume"}
 
 
@@ -48,7 +49,6 @@ class Ended:
     world: World | None = None
     reduction: Reduction | None = None
     parking: str = ""
-    requests: Mapping[str, int] = field(default_factory=dict)
 
 
 def open_all(instrument: Instrument, world: World | None, now_ns: Callable[[], int]) -> dict[str, Opened]:
@@ -75,10 +75,7 @@ def _link(role: str, address: str, world: World | None) -> Link:
 def conduct(job: Job, *, record: Path, seed: int, virtual: bool, screen: Screen) -> Ended:
     """Run a job to its end, parked, with its record closed and reduced. Raises TrackfieldError."""
     with asyncio.Runner(loop_factory=VirtualLoop if virtual else None) as runner:
-        ended = runner.run(_conduct(job, record=record, seed=seed, virtual=virtual, screen=screen))
-    if ended.outcome.exit_code in (ExitCode.DONE, ExitCode.STOPPED, ExitCode.TRIPPED):
-        ended.reduction = reduce_record(record)
-    return ended
+        return runner.run(_conduct(job, record=record, seed=seed, virtual=virtual, screen=screen))
 
 
 async def _conduct(job: Job, *, record: Path, seed: int, virtual: bool, screen: Screen) -> Ended:
@@ -149,6 +146,13 @@ async def _run(
         outcome = await conductor.run()
     supervisor.close()
     await ticking
+    reduction = None
+    if outcome.exit_code in REDUCED and actions.number:
+        # from the file, as anybody will reduce it later; its results then join it
+        await journal.durable()
+        reduction = reduce_record(journal.path)
+        for row in reduction.rows():
+            journal.result(row)
     return Ended(
         outcome=outcome,
         record=journal.path,
@@ -156,6 +160,7 @@ async def _run(
         real_seconds=real_seconds() - started,
         ticks=supervisor.ticks,
         world=world,
+        reduction=reduction,
         parking=conductor.parking.text() if conductor.parking is not None else "",
     )
 

@@ -111,7 +111,9 @@ def parse(text: str, name: str, model: type[Model]) -> Model:
 
 
 def _refusal(error: ValidationError, text: str, name: str, model: type[BaseModel]) -> ConfigRefused:
-    first = error.errors(include_url=False)[0]
+    # an unknown key first: it is often a missing one, misspelt
+    faults = error.errors(include_url=False)
+    first = next((fault for fault in faults if fault["type"] == "extra_forbidden"), faults[0])
     path = first["loc"]
     problem, limit, next_action = _words(first, model)
     value = first.get("input")
@@ -133,7 +135,9 @@ def _words(fault: Any, model: type[BaseModel]) -> tuple[str, str | None, str]:
     kind, context = fault["type"], fault.get("ctx", {})
     match kind:
         case "extra_forbidden":
-            near = difflib.get_close_matches(str(fault["loc"][-1]), known_keys(model, fault["loc"][:-1]), 1)
+            near = difflib.get_close_matches(
+                str(fault["loc"][-1]), known_keys(model, fault["loc"][:-1]), 1, 0.5
+            )
             hint = f"did you mean {near[0]!r}?" if near else "remove the key or correct its name"
             return "unknown key", None, hint
         case "missing":

@@ -85,17 +85,18 @@ class Lowering:
         board, limits = self._board, self._board.envelope.outputs[output]
         if isnan(board.latches.demands[output]) and not self._adopt(output):
             return False if output == MAGNET else await self._off(output)
-        last = self._clock.mono_ns()  # a long rest before the ramp buys no larger first step
-        deadline = last + round(ramp_seconds(limits, board.latches.demands[output]) * NS)
+        began = self._clock.mono_ns()  # a long rest before the ramp buys no larger first step
+        deadline = began + round(ramp_seconds(limits, board.latches.demands[output]) * NS)
         while (demand := board.latches.demands[output]) > 0:
             await self._wait_tick()
             now = self._clock.mono_ns()
             if now > deadline:
                 return False
-            room = min(limits.per_second * ((now - last) / NS) * SLOPE_SHARE, limits.step)
-            last = now
-            if not await self._insist(output, Action.WRITE, max(demand - room, 0.0)):
-                return False
+            # from the last permit, as the guard counts: in real time that is later than our last turn
+            since = max(began, board.latches.permitted_ns[output])
+            room = min(limits.per_second * ((now - since) / NS) * SLOPE_SHARE, limits.step)
+            # what was refused or not acknowledged is tried again at the next tick, until the deadline
+            await self._insist(output, Action.WRITE, max(demand - room, 0.0))
         if output == MAGNET:
             await self._wait_for_current(deadline)
         return await self._insist(output, Action.DISABLE)

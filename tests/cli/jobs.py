@@ -19,10 +19,15 @@ def small_job(
     sample: dict[str, str] | None = None,
 ) -> Path:
     """Copies of a demo's files with a shorter run; ``replace`` changes texts. The sequence's path."""
-    names = {"instrument.toml": CONFIGS / "bench" / "instrument.toml", "sample.toml": CONFIGS / demo / "sample.toml"}
+    names = {
+        "instrument.toml": CONFIGS / "bench" / "instrument.toml",
+        "sample.toml": CONFIGS / demo / "sample.toml",
+    }
     changes = {"instrument.toml": instrument or {}, "sample.toml": sample or {}}
     for name, source in names.items():
-        (folder / name).write_text(changed(source.read_text(encoding="utf-8"), changes[name]), encoding="utf-8")
+        (folder / name).write_text(
+            changed(source.read_text(encoding="utf-8"), changes[name]), encoding="utf-8"
+        )
     text = (CONFIGS / demo / "sequence.toml").read_text(encoding="utf-8")
     text = re.sub(r"^blocks = \d+", f"blocks = {blocks}", text, flags=re.M)
     text = re.sub(r"^cycles_per_block = \d+", f"cycles_per_block = {cycles}", text, flags=re.M)

@@ -142,7 +142,7 @@ def test_a_fault_before_the_start_is_a_refusal_and_nothing_is_energised(tmp_path
 def test_a_wrong_device_is_refused_and_nothing_is_energised(tmp_path: Path) -> None:
     job = load_job(str(small_job(tmp_path)), simulated=True)
     other = small_job(tmp_path, instrument={'serial = "ESA-0001"': 'serial = "ESA-0002"'})
-    from controller.cli import session  # noqa: PLC0415
+    from controller.cli import session
 
     with pytest.MonkeyPatch.context() as patch:
         # the plant has the devices of one file, the controller is given the other
