@@ -16,6 +16,8 @@ from drivers.clock import NS
 
 # A stage waits this much longer than the slope asks, so that rounding never makes a refusal.
 MARGIN = 1.0 + 1e-6
+# ... and a stage is this much smaller than the largest step, for the same reason.
+STEP_SHARE = 1.0 - 1e-9
 ARRIVAL_TICKS = 40  # after this many ticks outside the band a jump is late
 
 
@@ -70,9 +72,8 @@ class Beam:
         starts = {output: self.set_volts[output] for output in targets}
         stages = 1
         for output, target in targets.items():
-            stages = max(
-                stages, math.ceil(abs(target - starts[output]) / self._settings[output].step_volts_max)
-            )
+            step = self._settings[output].step_volts_max * STEP_SHARE
+            stages = max(stages, math.ceil(abs(target - starts[output]) / step))
         for stage in range(1, stages + 1):
             share = stage / stages
             for output, target in targets.items():

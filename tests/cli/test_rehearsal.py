@@ -5,6 +5,7 @@ The judge of the outputs is the plant's own truth log and its truths, never the 
 
 from __future__ import annotations
 
+import itertools
 from pathlib import Path
 
 import pytest
@@ -55,7 +56,8 @@ def test_a_plain_rehearsal_ends_parked_with_ratios_near_the_truth(tmp_path: Path
     assert ended.outcome.exit_code is ExitCode.DONE
     assert_de_energised(ended)
     assert verify(ended.record) == []
-    assert ended.reduction is not None and ended.world is not None
+    assert ended.reduction is not None
+    assert ended.world is not None
     for result in ended.reduction.results:
         truth = ended.world.true_ratio(*result.name.split("/"))
         assert abs(result.value - truth) < 5 * result.u
@@ -113,7 +115,7 @@ def test_water_loss_ramps_the_magnet_and_is_not_instant(tmp_path: Path) -> None:
     log = [event for event in ended.world.truth.events if event.at > AT + 2.0]  # type: ignore[union-attr]
     ramp = [event for event in log if event.what == "magnet set"]
     assert len(ramp) > 10  # by set-points inside the slope, not at once
-    steps = [abs(a.value - b.value) for a, b in zip(ramp, ramp[1:], strict=False)]
+    steps = [abs(a.value - b.value) for a, b in itertools.pairwise(ramp)]
     assert max(steps) <= 5.0 * 0.05 * 1.01
 
 
