@@ -78,6 +78,11 @@ class Electrometer:
         self.baseline = 20e-6 * float(rng.standard_normal())  # V
         self._normal = Normals(rng)
         self._at, self._volts = 0.0, 0.0
+        self._gate_volts = 0.0  # the filter's output when the gate was opened
+
+    def open_gate(self, t: float, ions_per_second: float) -> None:
+        """Remember where the filter stands: somebody may look at the meter during the gate."""
+        self._gate_volts = self.advance(t, ions_per_second)
 
     def input_volts(self, ions_per_second: float) -> float:
         return self.gain * ions_per_second * E_CHARGE * self.spec.resistance
@@ -92,10 +97,9 @@ class Electrometer:
         return self._volts
 
     def draw(self, ions_per_second: float, seconds: float) -> float:
-        """Volt-seconds of a gate that begins at the filter's present state; advances it to the end."""
+        """Volt-seconds of the gate that was opened last, of a steady beam."""
         goal, tau = self.input_volts(ions_per_second), self.spec.time_constant
-        lag = (self._volts - goal) * tau * (1.0 - math.exp(-seconds / tau)) if tau else 0.0
-        self.advance(self._at + seconds, ions_per_second)
+        lag = (self._gate_volts - goal) * tau * (1.0 - math.exp(-seconds / tau)) if tau else 0.0
         # a boxcar mean over t has noise bandwidth 1/(2t): V^2 = 2kTR/t (Johnson), and shot noise alike
         johnson = 2.0 * K_B * self.spec.kelvin * self.spec.resistance * seconds
         shot = ions_per_second * seconds * (E_CHARGE * self.spec.resistance) ** 2

@@ -233,7 +233,7 @@ class ElectrometerTwin(GateTwin):
         return (volts + 1e-4 * self.normal(),)
 
     def opened(self, t: float) -> None:
-        self.plant.electrometer.advance(t, self.plant.ions(t))
+        self.plant.electrometer.open_gate(t, self.plant.ions(t))
 
     def integrate(self, start: float, end: float) -> tuple[float, bool]:
         rate = self.plant.mean_ions(start, end)

@@ -18,6 +18,9 @@ from controller.route.plan import Route, Station, Stop
 LANDING_SECONDS = 2.0  # eddy lag and probe loop after a ramp; seen in rehearsals of the demo instrument
 POINT_SECONDS = 0.25  # one point of a centring scan: gate, jump and read-back
 CENTRING_POINTS = 21  # of a fine scan
+# The electrometer's resistor forgets the beam before it by e for each time constant: from the largest peak
+# to the smallest worth measuring (1e-4) at 1e-3 of it takes sixteen; for finding a peak, half will do.
+ELECTROMETER_SETTLES = 16.0
 WIDE_SPAN = 4e-3  # of mass: what dividers, radii and field law may be off before calibration
 
 
@@ -100,8 +103,14 @@ def _jump_seconds(route: Route, instrument: Instrument) -> list[float]:
         settle = max(instrument.accelerating.settle, instrument.esa.settle)
         # the read-back that proves arrival comes with the next poll
         poll = instrument.devices.accelerating.poll
-        answer.append(max(accel, esa) + settle + 0.5 * (poll + tick))
+        answer.append(max(accel, esa) + settle + 0.5 * (poll + tick) + _detector_seconds(stop, instrument))
     return answer
+
+
+def _detector_seconds(stop: Stop, instrument: Instrument) -> float:
+    if stop.detector == "counter":
+        return instrument.counter.settle
+    return ELECTROMETER_SETTLES * instrument.electrometer.time_constant
 
 
 def _move_seconds(route: Route, instrument: Instrument) -> list[float]:

@@ -12,7 +12,7 @@ from collections.abc import Awaitable, Callable
 from controller.errors import ExitCode
 from controller.physics.peak import peak_widths
 from controller.record.journal import DetectorRow
-from controller.route.forecast import CENTRING_POINTS, WIDE_SPAN
+from controller.route.forecast import CENTRING_POINTS, ELECTROMETER_SETTLES, WIDE_SPAN
 from controller.route.plan import Station, Stop
 from controller.run.beam import Beam
 from controller.run.centring import Centre, NoPeak, ScanPoint, coarse_scan, find_centre, scan_factors
@@ -24,6 +24,7 @@ from drivers.contract import Integration
 
 ENERGY_POINTS = 21
 CENTRE_GATE = 0.1  # s per point
+ELECTROMETER_SETTLES_SCAN = 0.5 * ELECTROMETER_SETTLES
 LATE_IN_A_ROW = 3  # stops that did not arrive before the run holds
 ARRIVAL_TRIES = 2
 
@@ -178,6 +179,7 @@ class Actions:
         return 1.0 / (1.602176634e-19 * self._rig.instrument.electrometer.resistance)
 
     async def _signal(self, stop: Stop) -> float:
+        await self._detector_settles(stop, ELECTROMETER_SETTLES_SCAN)
         return (await self._rig.gate(stop.detector, CENTRE_GATE)).total
 
     # --- step, settle, dwell, read ---------------------------------------------------------------
@@ -197,6 +199,7 @@ class Actions:
                 self._station = None  # step again, from the magnet up
                 return Event.RETRY
             self._late = True
+        await self._detector_settles(self.visit.stop, ELECTROMETER_SETTLES)
         self._tries = 0
         self._late_row = self._late_row + 1 if self._late else 0
         if self._late_row > LATE_IN_A_ROW:
@@ -273,6 +276,13 @@ class Actions:
     async def _voltages(self, stop: Stop, factor: float) -> bool:
         accel = stop.accel_volts * factor * (1.0 + self.beam.energy_trim)
         return await self.beam.move(accel, stop.esa_volts * factor)
+
+    async def _detector_settles(self, stop: Stop, time_constants: float) -> None:
+        instrument = self._rig.instrument
+        if stop.detector == "counter":
+            await self._rig.clock.sleep(instrument.counter.settle)
+        else:
+            await self._rig.clock.sleep(time_constants * instrument.electrometer.time_constant)
 
     def _reference_stop(self, station: Station) -> Stop:
         return self._stop(station, station.reference.label)

@@ -237,6 +237,28 @@ def test_kill_9_loses_no_committed_reading(tmp_path: Path) -> None:
     assert invoke(["reduce", str(path)]) == 0
 
 
+def test_hold_and_resume_by_signal_centre_again_and_repeat_the_stop(tmp_path: Path) -> None:
+    child = _started(tmp_path, "rehearse", 4000)
+    path = tmp_path / "r.sqlite"
+    _wait_for_rows(path, "readings", 30)
+    child.send_signal(signal.SIGUSR1)
+    _wait_for_rows(path, "states WHERE target = 'holding'", 1)
+    child.send_signal(signal.SIGUSR2)
+    _wait_for_rows(path, "states WHERE event = 'resume'", 1)
+    time.sleep(0.5)
+    child.send_signal(signal.SIGINT)
+    _, err = child.communicate(timeout=60)
+    assert child.returncode == ExitCode.STOPPED, err
+    with RecordReader(path) as record:
+        moves = [tuple(str(cell) for cell in row) for row in record.rows("states", "source, event, target")]
+        rows = [(row.block, row.cycle, row.stop) for row in record.readings() if row.live_seconds < 1.5]
+    held = next(i for i, move in enumerate(moves) if move[2] == "holding")
+    assert moves[held + 1] == ("holding", "resume", "centring")
+    assert moves[held + 2] == ("centring", "centred", "stepping")
+    single = [row for row in rows if row[2] == "88Sr+"]
+    assert len(single) == len(set(single))  # nothing was measured twice
+
+
 QUICK = {
     'detector_vacuum_hold = "60 s"': 'detector_vacuum_hold = "1 s"',
     'cover_hold = "5 s"': 'cover_hold = "1 s"',

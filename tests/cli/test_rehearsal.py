@@ -199,3 +199,31 @@ def test_several_stations_keep_every_field_inside_its_window(tmp_path: Path) -> 
     assert len(rows) == 14 * 4
     for row in rows:
         assert abs(row.field_tesla / fields[row.station] - 1) < 15e-6, (row.stop, row.flags)
+
+
+ELECTROMETER = {
+    'ion = "84Sr+"\n': 'ion = "84Sr+"\ndetector = "electrometer"\n',
+    'ion = "85Rb+"\n': 'ion = "85Rb+"\ndetector = "electrometer"\n',
+    'ion = "86Sr+"\n': 'ion = "86Sr+"\ndetector = "electrometer"\n',
+    'ion = "87Sr+"\n': 'ion = "87Sr+"\ndetector = "electrometer"\n',
+    'ion = "88Sr+"\n': 'ion = "88Sr+"\ndetector = "electrometer"\n',
+    'mass_to_charge = "83.5 u"': 'mass_to_charge = "83.5 u"\ndetector = "electrometer"',
+    'mass_to_charge = "85.5 u"': 'mass_to_charge = "85.5 u"\ndetector = "electrometer"',
+    'mass_to_charge = "88.5 u"': 'mass_to_charge = "88.5 u"\ndetector = "electrometer"',
+}
+
+
+def test_the_electrometer_measures_the_same_ratio_once_it_has_forgotten_the_last_peak(tmp_path: Path) -> None:
+    ended = rehearse(
+        tmp_path,
+        cycles=18,
+        replace=ELECTROMETER,
+        sample={'rate = "680 kHz"': 'rate = "200 MHz"', 'rate = "1.3 kHz"': 'rate = "400 kHz"'},
+    )
+    assert ended.outcome.exit_code is ExitCode.DONE, ended.outcome.reason
+    assert ended.reduction is not None
+    assert ended.world is not None
+    for result in ended.reduction.results:
+        truth = ended.world.true_ratio(*result.name.split("/"))
+        assert result.u < 2e-3 * truth
+        assert abs(result.value - truth) < 3 * result.u, (result.name, result.value / truth - 1)
