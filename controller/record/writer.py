@@ -17,7 +17,7 @@ from typing import Protocol
 from controller.errors import RecordAtRisk
 from controller.record.schema import COUNTED
 
-FLUSH_ROWS = 1024  # virtual time: rows of one table before they are written; about 1 MB of telemetry
+FLUSH_ROWS = 200  # virtual time: rows of one table before they are written; more would outgrow the cache
 PERIOD_SECONDS = 0.1  # real time: group commit; the most that a power cut can take of unawaited rows
 LAG_ROWS = 20  # real time: backlog at which the age of the oldest row is looked at
 LAG_NS_MAX = 2_000_000_000  # older than this unwritten: a stuck disk, told to the supervisor

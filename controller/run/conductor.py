@@ -117,7 +117,8 @@ class Conductor:
                     "info", "unanswered", f"{posted.event.value} is not answered in state {state.value}"
                 )
                 continue
-            await self._end_action()
+            if posted.generation is None:
+                await self._end_action()  # an outcome, by contrast, comes from an action that has ended
             target = self.machine.fire(posted.event)
             self._rig.record.state(self._rig.clock.mono_ns(), state.value, posted.event.value, target.value)
             self._note(posted, state)

@@ -28,8 +28,13 @@ from drivers.contract import Quality
 GAIN = 0.5
 # Inside the window the error is averaged over about this many readings before it is acted on, and left
 # alone below this part of the window, so that the probe's noise is not written to the magnet.
-READINGS_AVERAGED = 4
+READINGS_AVERAGED = 3
 DEAD_BAND = 0.2
+# Inside the window every second reading is enough; once the field has stayed there for longer than the
+# slowest eddy mode lives, every fourth.
+INSIDE_READINGS = 2
+CALM_SECONDS = 3.0
+CALM_READINGS = 4
 AFTER_TICK_NS = 1_000_000
 
 
@@ -145,6 +150,7 @@ class Field:
         amps_per_tesla = 1.0 / self._model.tesla_per_amp(self.amps)
         heard_ns, smooth = rig.clock.mono_ns(), 0.0
         period_ns = round(rig.instrument.devices.probe.poll * NS)
+        calm_ns = round(CALM_SECONDS * NS)
         while True:
             reading = rig.supervisor.snapshot.readings[self._probe]
             if reading.at_ns <= heard_ns or reading.quality is not Quality.GOOD:
@@ -168,8 +174,10 @@ class Field:
                 if abs(smooth) > DEAD_BAND * window:
                     await self._trim(-smooth * target * amps_per_tesla)
                     smooth = 0.0
-            # straight to the tick that will have heard the probe again
-            await rig.clock.sleep_until_ns(heard_ns + period_ns + AFTER_TICK_NS)
+            # straight to the tick that will have heard the probe again; a field that has arrived and
+            # stayed is looked at less often
+            readings = 1 if since < 0 else CALM_READINGS if heard_ns - since > calm_ns else INSIDE_READINGS
+            await rig.clock.sleep_until_ns(heard_ns + readings * period_ns + AFTER_TICK_NS)
 
     async def _trim(self, step: float) -> None:
         settings = self._settings

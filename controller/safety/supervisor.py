@@ -198,12 +198,18 @@ class Supervisor:
         self._closing = True
 
     def _on_time(self) -> None:
+        """The tick that is due; in virtual time also those after it, while nobody else has anything to do."""
+        while self._one_tick():
+            pass
+
+    def _one_tick(self) -> bool:
         """One tick: read, freeze, judge, act. What is to be written and told comes after, in
-        ``_conclude``: at once when nothing happened, else when the commands have left."""
+        ``_conclude``: at once when nothing happened, else when the commands have left. Answers whether
+        the next tick is due now."""
         if self._closing:
             if not self._ended.done():
                 self._ended.set_result(None)
-            return
+            return False
         period = self._tick_ns
         late = self._clock.mono_ns() - self._number * period
         if late > period:
@@ -215,15 +221,18 @@ class Supervisor:
                 new = self._reflex.act(self._present, self._board.snapshot.at_ns)
                 if new:
                     # runs after the first steps of the tasks that were just made: those are the commands
-                    asyncio.get_running_loop().call_soon(self._conclude, sample, late, new)
-                    return
+                    asyncio.get_running_loop().call_soon(self._conclude_later, sample, late, new)
+                    return False
         except Exception as error:  # noqa: BLE001 - the boundary: row 12b, and the watchdog starves
             self.internal_fault(f"{type(error).__name__}: {error} in the tick")
-            self._next()
-            return
-        self._conclude(sample, late, ())
+            return self._next()
+        return self._conclude(sample, late, ())
 
-    def _conclude(self, sample: Sample, late: int, new: tuple[Cause, ...]) -> None:
+    def _conclude_later(self, sample: Sample, late: int, new: tuple[Cause, ...]) -> None:
+        if self._conclude(sample, late, new):
+            self._on_time()
+
+    def _conclude(self, sample: Sample, late: int, new: tuple[Cause, ...]) -> bool:
         try:
             for cause in new:
                 self._reflex.say(cause)
@@ -232,17 +241,21 @@ class Supervisor:
                 self._watchdog()
         except Exception as error:  # noqa: BLE001 - the boundary: row 12b, and the watchdog starves
             self.internal_fault(f"{type(error).__name__}: {error} at the end of the tick")
-        self._next()
+        return self._next()
 
-    def _next(self) -> None:
+    def _next(self) -> bool:
         self.ticks += 1
         self._number += 1
-        self._timer = self._clock.call_at_ns(self._number * self._tick_ns, self._on_time)
+        due = self._number * self._tick_ns
         if self._waiters:
             waiters, self._waiters = self._waiters, []
             for waiter in waiters:
                 if not waiter.done():
                     waiter.set_result(None)
+        elif self._clock.skip_to_ns(due):
+            return True
+        self._timer = self._clock.call_at_ns(due, self._on_time)
+        return False
 
     def _judge_lateness(self, late_ns: int) -> None:
         """Count and judge a late tick. In virtual time a tick is never late, by the same sum."""
