@@ -29,7 +29,7 @@ GAIN = 0.5
 # Inside the window the error is averaged over about this many readings before it is acted on, and left
 # alone below this part of the window, so that the probe's noise is not written to the magnet.
 READINGS_AVERAGED = 3
-DEAD_BAND = 0.2
+DEAD_BAND = 0.3
 # Inside the window every second reading is enough; once the field has stayed there for longer than the
 # slowest eddy mode lives, every fourth.
 INSIDE_READINGS = 2
