@@ -293,15 +293,3 @@ def test_every_command_is_in_the_readme_and_has_help() -> None:
     for name, command in trackfield.commands.items():
         assert f"`trackfield {name}" in text
         assert command.help
-
-
-def test_help_is_light(tmp_path: Path) -> None:
-    code = (
-        "import sys\n"
-        "from controller.cli.commands import invoke\n"
-        "invoke(['--help'])\n"
-        "heavy = {'scipy', 'matplotlib', 'pint', 'pyarrow', 'numpy', 'pydantic'} & set(sys.modules)\n"
-        "sys.exit(','.join(sorted(heavy)) or 0)\n"
-    )
-    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
-    assert done.returncode == 0, done.stderr

@@ -1,0 +1,90 @@
+"""Quantities with units, against pint itself; and what is no quantity."""
+
+from __future__ import annotations
+
+import contextlib
+import math
+
+import pint
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from pydantic import ValidationError
+
+from controller.config.units import Fraction, Kelvin, Seconds, Settings, Volts, parse_quantity
+
+PINT = pint.UnitRegistry(autoconvert_offset_to_baseunit=True)
+
+
+@pytest.mark.parametrize(
+    ("text", "unit", "value"),
+    [
+        ("8 kV", "V", 8000.0),
+        ("250 ms", "s", 0.25),
+        ("20 ns", "s", 2e-8),
+        ("90 deg", "rad", math.pi / 2),
+        ("15 ppm", "dimensionless", 15e-6),
+        ("0.1 percent", "dimensionless", 1e-3),
+        ("6 l/min", "m**3/s", 1e-4),
+        ("400 kHz", "1/s", 4e5),
+        ("4e5 /s", "1/s", 4e5),
+        ("203.5 u", "u", 203.5),
+        ("5 A/s", "A/s", 5.0),
+        ("20 um", "m", 2e-5),
+    ],
+)
+def test_unit_strings_mean_what_pint_says(text: str, unit: str, value: float) -> None:
+    assert parse_quantity(text, unit) == pytest.approx(value, rel=1e-12)
+    number, _, suffix = text.partition(" ")
+    if not suffix.startswith("/"):
+        reference = PINT.Quantity(float(number), suffix).to(unit).magnitude
+        assert parse_quantity(text, unit) == pytest.approx(reference, rel=1e-12)
+
+
+def test_a_temperature_scale_has_an_offset() -> None:
+    """40 degrees Celsius are 313.15 K: definition of the scale."""
+    assert parse_quantity("40 degC", "K") == pytest.approx(313.15)
+
+
+class Example(Settings):
+    volts: Volts = 1.0
+    wait: Seconds = 0.0
+    warm: Kelvin = 300.0
+    share: Fraction = 0.0
+    count: int = 1
+
+
+@pytest.mark.parametrize(
+    ("key", "value", "says"),
+    [
+        ("volts", 8000, "needs a unit, for example '8 kV'"),
+        ("volts", "8 A", "not a quantity in V"),
+        ("volts", "8 floops", "not a number, a space and a unit"),
+        ("volts", "nan V", "not finite"),
+        ("volts", "inf V", "not finite"),
+        ("volts", True, "needs a number"),
+        ("count", True, "needs a number"),
+        ("share", "3 V", "not a quantity in dimensionless"),
+        ("share", [1], "needs a number"),
+    ],
+)
+def test_what_is_no_quantity_is_said(key: str, value: object, says: str) -> None:
+    with pytest.raises(ValidationError, match=says):
+        Example.model_validate({key: value})
+
+
+def test_zero_needs_no_unit_and_a_share_may_be_a_number() -> None:
+    example = Example.model_validate({"volts": 0, "share": 0.25})
+    assert (example.volts, example.share) == (0.0, 0.25)
+
+
+def test_settings_are_frozen() -> None:
+    with pytest.raises(ValidationError):
+        Example().volts = 2.0  # type: ignore[misc]
+
+
+@settings(max_examples=300, deadline=None)
+@given(st.text(max_size=30), st.sampled_from(["V", "s", "K", "1/s", "dimensionless"]))
+def test_any_text_is_a_number_or_a_value_error(text: str, unit: str) -> None:
+    with contextlib.suppress(ValueError):
+        assert math.isfinite(parse_quantity(text, unit))
