@@ -21,7 +21,13 @@ from controller.route.forecast import describe, forecast
 from controller.route.plan import plan_route
 
 CONFIGS = Path(__file__).parents[2] / "configs"
-POOL = ["39K+", "56Fe+", "63Cu+", "65Cu+", "85Rb+", "87Sr+", "88Sr+", "90Zr+", "96Zr+", "129Xe+", "132Xe+", "136Xe+", "204Pb+", "208Pb+", "232Th+", "238U+"]
+POOL = [
+    f"{nuclide}+"
+    for nuclide in (
+        *("39K", "56Fe", "63Cu", "65Cu", "85Rb", "87Sr", "88Sr", "90Zr"),
+        *("96Zr", "129Xe", "132Xe", "136Xe", "204Pb", "208Pb", "232Th", "238U"),
+    )
+]
 
 
 def bench() -> Instrument:
