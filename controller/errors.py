@@ -72,22 +72,10 @@ class DeviceUnreachable(TrackfieldError):
     exit_code = ExitCode.DEVICE_UNREACHABLE
 
 
-class InstrumentHeld(TrackfieldError):
-    """Another controller holds the instrument."""
-
-    exit_code = ExitCode.INSTRUMENT_HELD
-
-
 class RecordAtRisk(TrackfieldError):
     """The record cannot be written, or would overwrite another."""
 
     exit_code = ExitCode.RECORD_AT_RISK
-
-
-class SafeStateUnconfirmed(TrackfieldError):
-    """The outputs could not be confirmed at zero. A person must act, now."""
-
-    exit_code = ExitCode.PARKED_UNCONFIRMED
 
 
 class Defect(TrackfieldError):

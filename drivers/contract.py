@@ -88,10 +88,6 @@ class DeviceAbsent(DeviceError):
     """Opening failed: no port, no answer at all."""
 
 
-class DeviceMismatch(DeviceError):
-    """Somebody answered, but not the device that the instrument file names."""
-
-
 class DeviceTimeout(DeviceError):
     """No reply before the deadline; whether the command was applied is unknown."""
 

@@ -53,22 +53,6 @@ def reduced_chi2(values: Array, variances: Array, weights: Array) -> float | Non
     return float(np.sum((values - mean) ** 2 / variances)) / (len(values) - 1)
 
 
-def counting_floor(
-    coefficients: Sequence[float],
-    rates: Sequence[float],
-    dwell_seconds: Sequence[float],
-    cycles: int,
-    backgrounds: Sequence[float] | None = None,
-) -> float:
-    """Smallest relative uncertainty that counting allows: sqrt((1/N) sum c^2 (n + b)/(n^2 t)).
-
-    ``coefficients``: d ln(ratio)/d ln(n) of each ion; net rates and known backgrounds in 1/s.
-    """
-    under = backgrounds if backgrounds is not None else [0.0] * len(rates)
-    terms = zip(coefficients, rates, dwell_seconds, under, strict=True)
-    return math.sqrt(sum(c * c * (n + b) / (n * n * t) for c, n, t, b in terms) / cycles)
-
-
 def effective_dof(parts: Sequence[tuple[float, float]]) -> float:
     """Welch-Satterthwaite (JCGM 100, G.4.1): u^4 / sum(u_i^4 / nu_i) from (u_i, nu_i)."""
     total = sum(u * u for u, _ in parts)

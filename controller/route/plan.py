@@ -11,7 +11,6 @@ other order travels at least as far up and down.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from math import ceil
 
@@ -63,9 +62,6 @@ class _Group:
     reference: Ion
     centre_on: str | None
     ions: tuple[tuple[IonSettings, Ion], ...]
-
-
-Refuse = Callable[..., ConfigRefused]
 
 
 def plan_route(sequence: Sequence, instrument: Instrument, file: str = "sequence file") -> Route:

@@ -15,7 +15,6 @@ class Visit(NamedTuple):
     cycle: int  # within the block
     station: Station
     stop: Stop
-    opens_block: bool
 
 
 class Itinerary:
@@ -35,7 +34,7 @@ class Itinerary:
         block, in_block = divmod(number, self.stops_per_block)
         cycle, in_cycle = divmod(in_block, self.stops_per_cycle)
         station, stop = self._pass[in_cycle]
-        return Visit(number, block, cycle, station, stop, in_block == 0)
+        return Visit(number, block, cycle, station, stop)
 
     def centre_before(self, number: int) -> bool:
         """Whether peak centring is due before this visit (block boundaries, after the first)."""

@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 
 from controller.reduce import statistics
 from controller.reduce.student import coverage_factor, incomplete_beta
+from controller.route.dwell import counting_u
 
 
 @given(st.floats(1, 1e5), st.floats(0.5, 0.999))
@@ -94,7 +95,7 @@ def test_reduced_chi2():
 
 def test_counting_floor_by_formula_and_by_simulation():
     # sqrt((1/1e5 + 1/3e4)/100), by hand
-    floor = statistics.counting_floor([1, -1], [1e5, 1e4], [1.0, 3.0], 100)
+    floor = counting_u([1, -1], [1e5, 1e4], [1.0, 3.0], 100)
     assert floor * 1e6 == pytest.approx(658.280, rel=1e-5)
     rng = np.random.default_rng(6)
     numerators, denominators = rng.poisson(1e7, 20_000), rng.poisson(3e6, 20_000)
@@ -104,14 +105,12 @@ def test_counting_floor_by_formula_and_by_simulation():
 def test_counting_floor_of_an_internally_normalised_ratio():
     # ln y = ln n87 - 0.496407 ln n86 - 0.503593 ln n88: the exponential law's coefficients
     coefficients = [1.0, -0.496407, -0.503593]
-    floor = statistics.counting_floor(coefficients, [69e3, 96.5e3, 800e3], [4.0, 2.0, 1.0], 100)
+    floor = counting_u(coefficients, [69e3, 96.5e3, 800e3], [4.0, 2.0, 1.0], 100)
     by_hand = sum(
         c * c / (n * t) for c, n, t in zip(coefficients, [69e3, 96.5e3, 8e5], [4, 2, 1], strict=True)
     )
     assert floor == pytest.approx(math.sqrt(by_hand / 100), rel=1e-12)
     assert floor * 1e6 == pytest.approx(228.4, abs=0.1)
-    with_background = statistics.counting_floor([1], [100.0], [1.0], 1, backgrounds=[300.0])
-    assert with_background == pytest.approx(0.2)
 
 
 def test_mean_of_ratios_is_biased_and_ratio_of_sums_is_not():
