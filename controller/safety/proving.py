@@ -48,6 +48,7 @@ class Prover:
     ) -> None:
         self._instrument, self._board, self._gateway = instrument, board, gateway
         self._monitors, self._clock, self._wait_tick = monitors, clock, wait_tick
+        self._units = {c.name: f" {c.unit}" if c.unit else "" for m in monitors.values() for c in m.channels}
 
     async def prove(self, *, wait: bool) -> list[Finding]:
         """All findings in a fixed order. ``wait``: let permissives that hold mature for their time."""
@@ -113,7 +114,11 @@ class Prover:
         ):
             text = f"the device holds {tuple(held)}, wider than {tuple(wanted)}"
             return Finding(name, "limits", "fail", text, "set the device's own limits by hand")
-        text = f"{held.maximum:g}, {held.slew_per_second:g} per s, watchdog {held.watchdog_seconds:g} s"
+        unit = self._units[self._board.envelope.channels[limits.read_slots[0]]].strip()
+        text = (
+            f"{held.maximum:g} {unit}, {held.slew_per_second:g} {unit}/s, "
+            f"device watchdog {held.watchdog_seconds:g} s"
+        )
         return Finding(name, "limits", "pass", text, "")
 
     def _state(self, output: int, *, proven: bool) -> Finding:
@@ -126,17 +131,18 @@ class Prover:
             text = f"{lost[0].source} cannot be read: {lost[0].detail or 'too old'}"
             return Finding(name, "state", "fail", text, "look at the line", lost[0].quality is Quality.ABSENT)
         reads = max(abs(readings[slot].value) for slot in limits.read_slots)
+        unit = self._units[board.envelope.channels[limits.read_slots[0]]]
         enabled = limits.status_slot >= 0 and bool(int(readings[limits.status_slot].value) & 1)
         if output == PERMIT:
             enabled = reads > limits.safe
         if reads > limits.safe or enabled:
             demand = readings[limits.set_slot].value if limits.set_slot >= 0 else reads
             board.adopt(output, demand=max(demand, 0.0), enabled=enabled, proven=proven)
-            text = f"reads {reads:.4g}, {'enabled' if enabled else 'disabled'}"
+            text = f"reads {reads:.4g}{unit}, {'enabled' if enabled else 'disabled'}"
             board.post("17", name, text)
             return Finding(name, "state", "fail", f"found energised: {text}", WORDS["17"][1])
         board.adopt(output, demand=0.0, enabled=False, proven=proven)
-        return Finding(name, "state", "pass", f"off, reads {reads:.4g}", "")
+        return Finding(name, "state", "pass", f"off, reads {reads:.2g}{unit}", "")
 
     # --- permissives -----------------------------------------------------------------------------
 
@@ -166,9 +172,10 @@ class Prover:
             reading, held = board.snapshot.readings[bound.slot], board.latches.held[number]
             hold = self._hold_ns(number)
             role, _, quantity = bound.source.partition(".")
-            value = f"{reading.value:.4g}" if reading.quality is Quality.GOOD else reading.detail
+            unit = self._units[bound.source]
+            value = f"{reading.value:.4g}{unit}" if reading.quality is Quality.GOOD else reading.detail
             if held < 0:
-                limits = f"permitted {bound.permit_low:g} to {bound.permit_high:g}"
+                limits = f"permitted {bound.permit_low:g} to {bound.permit_high:g}{unit}"
                 text = f"{value} ({limits}), row {bound.row}"
                 found.append(Finding(role, quantity, "fail", text, WORDS[bound.row][1]))
             elif now - held < hold:
