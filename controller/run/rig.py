@@ -15,6 +15,8 @@ from controller.safety.values import Action, Permit, Refusal, Trip
 from drivers.clock import Clock
 from drivers.contract import Detector, DeviceReplied, Integration
 
+PATIENCE_NS = 5_000_000_000  # longer than any debounce that the instrument file may name
+
 
 class Refused(Exception):
     """The guard said no to a request that the sequence needs. The run cannot go on."""
@@ -38,10 +40,20 @@ class Rig:
     detectors: Mapping[str, Detector]
 
     async def ask(self, output: str, action: Action, value: float = 0.0) -> None:
-        """One request to the guard. Raises Refused."""
-        verdict = await self.gateway.request(output, action, value)
-        if not isinstance(verdict, Permit):
-            raise Refused(output, verdict)
+        """One request to the guard. Raises Refused.
+
+        A refusal for a condition of the cause-and-effect table is waited out for a while: within its
+        debounce it either passes, or becomes the trip that ends the run under its right name.
+        """
+        deadline_ns = self.clock.mono_ns() + PATIENCE_NS
+        while True:
+            verdict = await self.gateway.request(output, action, value)
+            if isinstance(verdict, Permit):
+                return
+            passing = isinstance(verdict, Refusal) and verdict.row
+            if not passing or self.clock.mono_ns() >= deadline_ns:
+                raise Refused(output, verdict)
+            await self.supervisor.wait_tick()
 
     async def gate(self, detector: str, seconds: float) -> Integration:
         """Open a detector's gate, wait for it, fetch the result. Raises DeviceError."""

@@ -260,6 +260,11 @@ class Supervisor:
     def _judge_lateness(self, late_ns: int) -> None:
         """Count and judge a late tick. In virtual time a tick is never late, by the same sum."""
         self.overruns += 1
+        missed = late_ns // self._tick_ns
+        self._journal.event(
+            self._clock.mono_ns(), "warning", "overrun", "tick",
+            f"late by {late_ns / NS:.3f} s: {missed} ticks missed", {"missed": missed},
+        )  # fmt: skip
         if late_ns > PAUSED_NS:
             self._board.post("15b", "clock", f"paused {late_ns / NS:.2f} s")
         elif late_ns > self._overrun_ns:

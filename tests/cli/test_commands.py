@@ -84,11 +84,7 @@ def test_equal_files_and_seed_make_equal_records_under_any_hash_seed(tmp_path: P
 BAD = [
     ({"ions": '[[ions]]\nion = "84Sr+"', "to": '[[ions]]\nion = "84Xx+"'}, 3, "84Xx"),
     ({"ions": 'dwell = "4 s"', "to": 'dwell = "4 V"'}, 3, "is not a quantity in s"),
-    (
-        {"ions": "centre_every = 1", "to": "centre_every = 1\ncycels = 2"},
-        3,
-        "did you mean 'cycles_per_block'",
-    ),
+    ({"ions": "blocks = 1\n", "to": "blokcs = 1\n"}, 3, "did you mean 'blocks'"),
     ({"ions": "[[ratios]]", "to": "[[ratios]"}, 3, "is not TOML"),
     ({"ions": 'ion = "85Rb+"', "to": 'ion = "7Li+"'}, 3, "7Li+"),
     ({"ions": 'mass_to_charge = "83.5 u"', "to": 'mass_to_charge = "40.0 u"'}, 3, "outside the voltage span"),

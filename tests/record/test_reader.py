@@ -124,3 +124,16 @@ def test_two_processes_with_other_hash_seeds_write_equal_records(tmp_path):
         env = {**os.environ, "PYTHONHASHSEED": seed, "PYTHONPATH": f"{here.parents[1]}{os.pathsep}{here}"}
         subprocess.run([sys.executable, "-c", WRITE_ONE, str(tmp_path / name)], env=env, check=True)
     assert equal_rows(tmp_path / "a", tmp_path / "b") is None
+
+
+def test_ticks_that_a_late_program_missed_are_no_loss_and_others_are(make):
+    """The supervisor says how many ticks it missed; a gap that nobody explains is a lost row."""
+    explained, silent = make("late.sqlite"), make("lost.sqlite")
+    for record in (explained, silent):
+        for tick in (0, 1, 4, 5):
+            record.telemetry(tick, tick * 50_000_000, [1.0, 2.0, 3.0], None)
+    explained.event(5, "warning", "overrun", "tick", "late by 0.1 s", {"missed": 2})
+    for record in (explained, silent):
+        record.close()
+    assert verify(explained.path) == []
+    assert verify(silent.path) == ["table telemetry: 2 rows are missing between 0 and 5"]

@@ -12,7 +12,7 @@ from pathlib import Path
 
 import pytest
 
-ROOT = Path(__file__).parents[1]
+ROOT = Path(__file__).parents[2]
 OURS = ("controller", "drivers", "simulator")
 KERNEL = [
     ROOT / "controller" / "safety" / f"{name}.py" for name in ("values", "interlocks", "guard", "safestate")
