@@ -19,6 +19,7 @@ from simulator.spec import SupplySpec
 FAST_SHARE, FAST_SECONDS = 0.02, 0.005
 SLOW_SHARE, SLOW_SECONDS = 0.001, 0.1
 SEGMENTS_KEPT = 400
+FLAT_DECAYS = 40.0  # e^-40 of 10 kV is below any noise
 ARC_SECONDS = 0.02
 
 
@@ -41,6 +42,8 @@ class Supply:
         self._ripple = Wander(rng, spec.ripple, shortest=0.2, longest=600.0)
         self._segments = [Segment(0.0, 0.0, 0.0, 0.0, True)]
         self._starts = [0.0]
+        # from when the last segment is flat, and at what: most questions are asked of a supply at rest
+        self._flat_from, self._flat_volts = 0.0, 0.0
         self.set_point = 0.0
         self.enabled = False
         self.tripped = False
@@ -74,6 +77,8 @@ class Supply:
 
     def nominal(self, t: float) -> float:
         """The output as the supply's own divider sees it."""
+        if t >= self._flat_from:
+            return self._flat_volts
         segment = self._segments[-1]
         if t < segment.start:
             segment = self._segments[max(0, bisect.bisect_right(self._starts, t) - 1)]
@@ -99,6 +104,9 @@ class Supply:
     def _append(self, segment: Segment) -> None:
         self._segments.append(segment)
         self._starts.append(segment.start)
+        rest = FLAT_DECAYS * (self.spec.bleed if segment.off else SLOW_SECONDS)
+        self._flat_from = segment.slew_end + rest
+        self._flat_volts = 0.0 if segment.off else segment.goal
         if len(self._segments) > SEGMENTS_KEPT:
             del self._segments[: SEGMENTS_KEPT // 2]
             del self._starts[: SEGMENTS_KEPT // 2]
@@ -111,7 +119,5 @@ class Supply:
             share = (t - segment.start) / (segment.slew_end - segment.start)
             return segment.volts + step * (1.0 - FAST_SHARE - SLOW_SHARE) * share
         after = t - segment.slew_end
-        if step == 0.0 or after > 40.0 * SLOW_SECONDS:
-            return segment.goal
         lag = FAST_SHARE * math.exp(-after / FAST_SECONDS) + SLOW_SHARE * math.exp(-after / SLOW_SECONDS)
         return segment.goal - step * lag

@@ -67,5 +67,5 @@ def load_job(
         instrument=hardware,
         sample=source,
         faults=load_faults(faults) if faults else None,
-        route=plan_route(loaded.settings, hardware.settings),
+        route=plan_route(loaded.settings, hardware.settings, file=sequence, text=loaded.text),
     )

@@ -140,12 +140,13 @@ async def _run(
     actions = Actions(rig, itinerary, on_read=progress.read)
     conductor = Conductor(rig, actions)
     supervisor.listener = conductor.told
-    _calm_collector()
-    ticking = asyncio.create_task(supervisor.run(), name="supervisor")
-    with _signals(conductor, screen, clock):
-        outcome = await conductor.run()
-    supervisor.close()
-    await ticking
+    with _calm_collector(), _signals(conductor, screen, clock):
+        ticking = asyncio.create_task(supervisor.run(), name="supervisor")
+        try:
+            outcome = await conductor.run()
+        finally:
+            supervisor.close()
+            await ticking
     reduction = None
     if outcome.exit_code in REDUCED and actions.number:
         # from the file, as anybody will reduce it later; its results then join it
@@ -165,14 +166,21 @@ async def _run(
     )
 
 
-def _calm_collector() -> None:
+@contextlib.contextmanager
+def _calm_collector() -> Iterator[None]:
     """What was made for the set-up lives as long as the run: keep the collector from walking it again.
 
-    A tick makes some hundred tuples and no cycles; looking for cycles every 700 of them cost 5 %.
+    A tick makes some hundred tuples and no cycles, so that looking for cycles often finds nothing.
     """
+    before = gc.get_threshold()
     gc.collect()
     gc.freeze()
     gc.set_threshold(20_000, 20, 20)
+    try:
+        yield
+    finally:
+        gc.unfreeze()
+        gc.set_threshold(*before)
 
 
 def _write_truth(journal: RunRecord, job: Job, world: World) -> None:

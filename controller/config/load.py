@@ -8,7 +8,6 @@ import re
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any, Generic, TypeVar
 
 from pydantic import BaseModel, ValidationError
@@ -17,10 +16,14 @@ from controller.config.faults import Faults
 from controller.config.instrument import Instrument
 from controller.config.sample import Sample
 from controller.config.sequence import Sequence
+from controller.config.units import FaultAt
 from controller.errors import ConfigRefused
 
 Model = TypeVar("Model", bound=BaseModel)
 MAX_BYTES = 1_000_000  # a settings file larger than this is not a settings file
+MAX_VALUE = 80  # characters of a value in a message
+# what a TOML reader gives up on: integers of thousands of digits, brackets nested without end
+_BEYOND_READING = re.compile(r"[0-9][0-9_]{999}|[\[{][\s\[{]{99}")
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,20 +68,21 @@ def parse_sequence(text: str, name: str) -> Sequence:
 
 def _load(path: str, model: type[Model]) -> Loaded[Model]:
     try:
-        raw = Path(path).read_bytes()
+        with open(path, "rb") as file:
+            raw = file.read(MAX_BYTES + 1)
     except FileNotFoundError:
         raise ConfigRefused(
             "no such file", file=path, next_action="check the path, or the path in the sequence file"
         ) from None
-    except OSError as error:
+    except (OSError, ValueError) as error:  # ValueError: a path with a null character in it
+        why = error.strerror if isinstance(error, OSError) else "no such path is possible"
         raise ConfigRefused(
-            f"cannot be read ({error.strerror})", file=path, next_action="check the path and its permissions"
+            f"cannot be read ({why})", file=path, next_action="check the path and its permissions"
         ) from None
     if len(raw) > MAX_BYTES:
         raise ConfigRefused(
             "is too large for a settings file",
             file=path,
-            value=len(raw),
             limit=f"{MAX_BYTES} bytes",
             next_action="name the right file",
         )
@@ -102,12 +106,18 @@ def parse(text: str, name: str, model: type[Model]) -> Model:
         raise ConfigRefused(
             f"is not TOML: {error}", file=name, line=line, next_action="correct the line"
         ) from None
+    except (ValueError, RecursionError):
+        place = _BEYOND_READING.search(text)
+        raise ConfigRefused(
+            "is not TOML: a number too long or a nesting too deep to be read",
+            file=name,
+            line=text.count("\n", 0, place.start()) + 1 if place else None,
+            next_action="correct the line, or name the right file",
+        ) from None
     try:
         return model.model_validate(data)
     except ValidationError as error:
         raise _refusal(error, text, name, model) from None
-    except RecursionError:
-        raise ConfigRefused("is nested too deeply", file=name, next_action="name the right file") from None
 
 
 def _refusal(error: ValidationError, text: str, name: str, model: type[BaseModel]) -> ConfigRefused:
@@ -117,17 +127,32 @@ def _refusal(error: ValidationError, text: str, name: str, model: type[BaseModel
     path = first["loc"]
     problem, limit, next_action = _words(first, model)
     value = first.get("input")
+    cause = first.get("ctx", {}).get("error")
+    if isinstance(cause, FaultAt):
+        path, value = (*path, *cause.path), None  # the message has the values
     if isinstance(value, Mapping | list | tuple) or first["type"] == "missing":
         value = None
     return ConfigRefused(
         problem,
         file=name,
-        line=line_of(text, path),
+        line=line_of(text, path) or 1,
         key=key_text(path) or None,
-        value=value,
+        value=_Shortened(value) if len(repr(value)) > MAX_VALUE else value,
         limit=limit,
         next_action=next_action,
     )
+
+
+class _Shortened(str):
+    """The start of a value that would drown its message."""
+
+    __slots__ = ()
+
+    def __new__(cls, value: object) -> _Shortened:
+        return super().__new__(cls, f"{repr(value)[:MAX_VALUE]}...")
+
+    def __repr__(self) -> str:
+        return str(self)
 
 
 def _words(fault: Any, model: type[BaseModel]) -> tuple[str, str | None, str]:
@@ -135,10 +160,8 @@ def _words(fault: Any, model: type[BaseModel]) -> tuple[str, str | None, str]:
     kind, context = fault["type"], fault.get("ctx", {})
     match kind:
         case "extra_forbidden":
-            near = difflib.get_close_matches(
-                str(fault["loc"][-1]), known_keys(model, fault["loc"][:-1]), 1, 0.5
-            )
-            hint = f"did you mean {near[0]!r}?" if near else "remove the key or correct its name"
+            near = nearest_key(str(fault["loc"][-1]), known_keys(model, fault["loc"][:-1]))
+            hint = f"did you mean {near!r}?" if near else "remove the key or correct its name"
             return "unknown key", None, hint
         case "missing":
             return "missing key", None, "add the key"
@@ -155,6 +178,16 @@ def _words(fault: Any, model: type[BaseModel]) -> tuple[str, str | None, str]:
         case "value_error":
             return str(context["error"]), None, "correct the value"
     return str(fault["msg"]).lower(), None, "correct the value"
+
+
+def nearest_key(wrong: str, known: list[str]) -> str | None:
+    """The key that was probably meant: near as a whole, or else near to one of a key's words."""
+    whole = difflib.get_close_matches(wrong, known, 1, 0.6)
+    if whole:
+        return whole[0]
+    words = {word: key for key in reversed(known) for word in key.split("_")}
+    near = difflib.get_close_matches(wrong, list(words), 1, 0.7)
+    return words[near[0]] if near else None
 
 
 def known_keys(model: type[BaseModel], path: tuple[Any, ...]) -> list[str]:
@@ -184,43 +217,61 @@ def key_text(path: tuple[Any, ...]) -> str:
     """``("ions", 2, "dwell")`` as ``ions[2].dwell``."""
     answer = ""
     for step in path:
-        answer += f"[{step}]" if isinstance(step, int) else (f".{step}" if answer else str(step))
+        name = str(step) if str(step).isprintable() else repr(step)
+        answer += f"[{step}]" if isinstance(step, int) else (f".{name}" if answer else name)
     return answer
 
 
-_HEADER = re.compile(r"^\s*(\[\[?)\s*([^\]]+?)\s*\]")
-_KEY = re.compile(r"^\s*([A-Za-z0-9_\-\"'.+ ]+?)\s*=")
+# possessive: no line, however odd, is tried twice
+_HEADER = re.compile(r"\s*+(\[\[?)([^\]]++)\]\]?\s*+(?:#.*)?$")
+_KEY = re.compile(r"\s*+((?:[A-Za-z0-9_-]++|\"[^\"]*+\"|'[^']*+'|[ \t]*\.[ \t]*)++)\s*=")
+_STEP = re.compile(r"\"([^\"]*)\"|'([^']*)'|([A-Za-z0-9_-]+)")
+_TRIPLE = re.compile(r"\"\"\"|\'\'\'")
 
 
 def line_of(text: str, path: tuple[Any, ...]) -> int | None:
     """The line of a key path in TOML text: the key itself, else the nearest table that holds it."""
-    best: tuple[int, int] | None = None
-    counts: dict[str, int] = {}
+    best, depth_best = None, 0
+    counts: dict[tuple[Any, ...], int] = {}
     table: tuple[Any, ...] = ()
-    for number, line in enumerate(text.splitlines(), 1):
+    closing = ""  # of a text of many lines, whose inside holds no keys
+    for number, line in enumerate(text.split("\n"), 1):
+        if closing:
+            closing = "" if closing in line else closing
+            continue
+        opened = _TRIPLE.findall(line)
+        closing = opened[0] if len(opened) % 2 else ""
         header = _HEADER.match(line)
         if header:
-            name = header.group(2)
-            table = tuple(part.strip(" \"'") for part in name.split("."))
-            if header.group(1) == "[[":
-                counts[name] = counts.get(name, -1) + 1
-                table = (*table, counts[name])
-            here = table
+            here = table = _table(header.group(2), header.group(1) == "[[", counts)
         else:
             key = _KEY.match(line)
             if not key:
                 continue
-            here = (*table, *(part.strip(" \"'") for part in key.group(1).split(".")))
-        depth = _shared(here, path)
-        if depth == len(here) and (best is None or depth > best[0]):
-            best = (depth, number)
-    return best[1] if best else None
+            here = (*table, *_steps(key.group(1)))
+        if len(here) > depth_best and path[: len(here)] == here:
+            best, depth_best = number, len(here)
+    return best
 
 
-def _shared(here: tuple[Any, ...], path: tuple[Any, ...]) -> int:
-    depth = 0
-    for a, b in zip(here, path, strict=False):
-        if a != b:
-            break
-        depth += 1
-    return depth
+def line_at(text: str, key: str) -> int | None:
+    """``line_of`` for a key as ``key_text`` writes it: ``ions[2].dwell``."""
+    steps = re.findall(r"([A-Za-z_]+)|\[(\d+)\]", key)
+    return line_of(text, tuple(name or int(number) for name, number in steps))
+
+
+def _steps(name: str) -> list[str]:
+    return [double or single or bare for double, single, bare in _STEP.findall(name)]
+
+
+def _table(name: str, is_array: bool, counts: dict[tuple[Any, ...], int]) -> tuple[Any, ...]:
+    """The path of a header, with the number of each array's table that it stands in."""
+    path: tuple[Any, ...] = ()
+    steps = _steps(name)
+    for place, step in enumerate(steps):
+        path = (*path, step)
+        if is_array and place == len(steps) - 1:
+            counts[path] = counts.get(path, -1) + 1
+        if path in counts:
+            path = (*path, counts[path])
+    return path

@@ -2,39 +2,47 @@
 
 The field fixes the dimension; a bare number is refused where a unit is needed, a unit of another
 dimension is refused everywhere. ``pint`` does the arithmetic and is imported when a file is loaded.
+
+What reaches ``pint`` is filtered first, because it evaluates expressions: "1 9**9**9**9 V" would never
+return. It also counts angles and shares alike as dimensionless, so that "90 deg" would pass for a
+share and "10 rpm" for a rate: here the base units must be the same, not only the dimensions.
 """
 
 from __future__ import annotations
 
 import math
+import re
 from functools import cache
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, model_validator
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Strict
 
 if TYPE_CHECKING:
     from pint import UnitRegistry
 
 
 class Settings(BaseModel):
-    """Frozen, complete and strict: an unknown key is an error, and so is nan or infinity."""
+    """Frozen and complete: an unknown key is an error, and so is nan or infinity."""
 
-    model_config = ConfigDict(
-        frozen=True, extra="forbid", allow_inf_nan=False, strict=False, str_strip_whitespace=True
-    )
+    model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False, str_strip_whitespace=True)
 
-    @model_validator(mode="before")
-    @classmethod
-    def _no_truth_values(cls, data: Any) -> Any:
-        """``true`` is not the number one."""
-        if isinstance(data, dict):
-            for name, value in data.items():
-                field = cls.model_fields.get(name)
-                if field is None:
-                    continue
-                if isinstance(value, bool) and field.annotation is not bool:
-                    raise ValueError(f"{name} needs a number, not {value!r}")
-        return data
+
+class FaultAt(ValueError):
+    """What a check across several keys found, and the key (below the checked table) to correct."""
+
+    def __init__(self, message: str, *path: str | int) -> None:
+        super().__init__(message)
+        self.path = path
+
+
+LONGEST = 60  # characters of a quantity
+_NAME = r"(?:[A-Za-zµμΩ]+|%)(?:(?:\*\*|\^)-?[1-9]|[²³])?"
+_QUANTITY = re.compile(
+    r"([+-]?(?:\d+\.?\d*|\.\d+|inf|nan)(?:[eE][+-]?\d+)?)"
+    rf"\s*((?:1?\s*/\s*)?{_NAME}(?:\s*[*/·\s]\s*{_NAME})*|)",
+    re.ASCII,
+)
+_SHARES = {"": 1.0, "%": 1e-2, "percent": 1e-2, "permille": 1e-3, "ppm": 1e-6, "ppb": 1e-9}
 
 
 @cache
@@ -42,38 +50,57 @@ def _registry() -> UnitRegistry:
     from pint import UnitRegistry  # noqa: PLC0415 - a quarter of a second; only needed with a file
 
     registry: UnitRegistry = UnitRegistry(autoconvert_offset_to_baseunit=True)
-    registry.define("ppb = 1e-9")
     return registry
 
 
 def parse_quantity(text: str, unit: str) -> float:
     """The value of ``text`` in ``unit``. Raises ValueError with a message for a person."""
-    import pint  # noqa: PLC0415
-
-    registry = _registry()
-    number, _, suffix = text.strip().partition(" ")
-    try:
-        magnitude = float(number)
-        unit_text = suffix.strip() or "dimensionless"
-        given = registry.Quantity(magnitude, f"1{unit_text}" if unit_text.startswith("/") else unit_text)
-        value = float(given.to(unit).magnitude)
-    except pint.DimensionalityError:
-        raise ValueError(f"{text!r} is not a quantity in {unit}") from None
-    except (pint.PintError, ValueError, TypeError, AttributeError, AssertionError, OverflowError):
-        raise ValueError(
-            f"{text!r} is not a number, a space and a unit (expected something in {unit})"
-        ) from None
-    except Exception as error:  # noqa: BLE001 - a unit parser fed with anything fails in any way
-        raise ValueError(f"{text!r} is not understood as a quantity in {unit}: {error}") from None
+    parts = _QUANTITY.fullmatch(text.strip()) if len(text) <= LONGEST else None
+    if parts is None:
+        raise ValueError(f"{_short(text)} is not a number, a space and a unit")
+    number, suffix = float(parts.group(1)), parts.group(2)
+    if unit == "dimensionless":
+        if suffix not in _SHARES:
+            raise ValueError(f"{text!r} is not a share: its unit must be ppm, ppb, percent, % or none")
+        value = number * _SHARES[suffix]
+    else:
+        value = _converted(text, number, suffix, unit)
     if not math.isfinite(value):
         raise ValueError(f"{text!r} is not finite")
     return value
 
 
+def _converted(text: str, number: float, suffix: str, unit: str) -> float:
+    import pint  # noqa: PLC0415
+
+    registry = _registry()
+    if not suffix:
+        raise ValueError(f"{text!r} has no unit")
+    try:
+        given = registry.Quantity(number, f"1{suffix}" if suffix.startswith("/") else suffix)
+        same = given.to_base_units().units == registry.Quantity(1.0, unit).to_base_units().units
+        value = float(given.to(unit).magnitude) if same else math.nan
+    except pint.UndefinedUnitError:
+        raise ValueError(f"{text!r}: {suffix!r} is not a known unit") from None
+    except (pint.PintError, ValueError, TypeError, AttributeError, OverflowError):
+        raise ValueError(f"{text!r} is not a quantity in {unit}") from None
+    if not same:
+        raise ValueError(f"{text!r} is not a quantity in {unit}")
+    return value
+
+
+def _short(value: object) -> str:
+    text = repr(value)
+    return text if len(text) <= LONGEST else f"{text[:LONGEST]}..."
+
+
 def _quantity(unit: str, example: str) -> BeforeValidator:
     def convert(value: object) -> float:
         if isinstance(value, str):
-            return parse_quantity(value, unit)
+            try:
+                return parse_quantity(value, unit)
+            except ValueError as error:
+                raise ValueError(f"{error}; write for example {example!r}") from None
         if value == 0 and not isinstance(value, bool):
             return 0.0  # zero is zero in any unit
         raise ValueError(f"needs a unit, for example {example!r}")
@@ -81,12 +108,27 @@ def _quantity(unit: str, example: str) -> BeforeValidator:
     return BeforeValidator(convert)
 
 
+def _number(value: object) -> float:
+    if isinstance(value, int | float) and not isinstance(value, bool):
+        try:
+            return float(value)
+        except OverflowError:
+            raise ValueError("is too large") from None
+    raise ValueError("needs a number")
+
+
 def _fraction(value: object) -> float:
     if isinstance(value, str):
         return parse_quantity(value, "dimensionless")
     if isinstance(value, int | float) and not isinstance(value, bool):
-        return float(value)
+        return _number(value)
     raise ValueError("needs a number, or a string such as '15 ppm' or '0.1 percent'")
+
+
+def _text(value: str) -> str:
+    if not value or not value.isprintable():
+        raise ValueError("needs a text of one line")
+    return value
 
 
 Volts = Annotated[float, _quantity("V", "8 kV")]
@@ -106,3 +148,7 @@ CubicMetresPerSecond = Annotated[float, _quantity("m**3/s", "6 l/min")]
 ElectronVolts = Annotated[float, _quantity("eV", "5 eV")]
 AtomicMass = Annotated[float, _quantity("u", "203.5 u")]
 Fraction = Annotated[float, BeforeValidator(_fraction)]
+Number = Annotated[float, BeforeValidator(_number)]  # pure number: `true` and "1" are not
+Count = Annotated[int, Strict()]
+Flag = Annotated[bool, Strict()]
+Text = Annotated[str, AfterValidator(_text)]

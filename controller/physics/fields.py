@@ -7,9 +7,12 @@ terms are parts in 1e8; they cost nothing and are a check that controller and si
 from __future__ import annotations
 
 import math
+from typing import TYPE_CHECKING
 
-from controller.config.instrument import Geometry
 from controller.physics.constants import ATOMIC_MASS, ELEMENTARY_CHARGE, LIGHT_SPEED
+
+if TYPE_CHECKING:
+    from controller.config.instrument import Geometry  # which checks itself with these laws
 
 
 def field_tesla(mass_kg: float, charge: int, volts: float, radius: float) -> float:

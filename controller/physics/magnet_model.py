@@ -7,8 +7,10 @@ probe and what each visit teaches do the rest. It refuses outside its range.
 from __future__ import annotations
 
 import math
+from typing import TYPE_CHECKING
 
-from controller.config.instrument import MagnetSettings
+if TYPE_CHECKING:
+    from controller.config.instrument import MagnetSettings  # which checks itself with this law
 
 
 class OutsideRange(ValueError):

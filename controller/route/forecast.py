@@ -1,8 +1,8 @@
 """What a sequence will take and give, without running it (pure).
 
 Dead times are estimates from the instrument file: a voltage jump takes its slew and its settling, a
-magnet move its ramp and the hold, plus what the eddy lag and the probe's loop were seen to take. The
-run reports the measured times beside them.
+magnet move its ramp and the hold, plus what the eddy lag and the probe's loop were seen to take; the
+jump that goes with a move is made while the field lands. The run reports the measured times beside them.
 """
 
 from __future__ import annotations
@@ -56,7 +56,7 @@ def forecast(route: Route, sequence: Sequence, instrument: Instrument) -> Foreca
     run = sequence.run
     cycles = run.blocks * run.cycles_per_block
     dwell = sum(stop.dwell_seconds for stop in route.stops)
-    dead = sum(_jump_seconds(route, instrument)) + sum(_move_seconds(route, instrument))
+    dead = sum(_dead_seconds(route, instrument))
     centring = len(route.stations) * (LANDING_SECONDS + CENTRING_POINTS * POINT_SECONDS)
     start = _start_seconds(instrument) + len(route.stations) * _wide_points(instrument) * POINT_SECONDS
     centrings = 1 + (run.blocks - 1) // run.centre_every
@@ -93,18 +93,26 @@ def _ratio(
     )
 
 
-def _jump_seconds(route: Route, instrument: Instrument) -> list[float]:
-    tick = instrument.interlocks.tick
+def _dead_seconds(route: Route, instrument: Instrument) -> list[float]:
+    """Seconds without counting before each stop of a cycle, its first following the cycle's last."""
+    stops = [(station, stop) for station in route.stations for stop in station.stops]
     answer = []
-    stops = route.stops
-    for before, stop in zip((stops[-1], *stops[:-1]), stops, strict=True):
-        accel = abs(stop.accel_volts - before.accel_volts) / instrument.accelerating.volts_per_second_max
-        esa = abs(stop.esa_volts - before.esa_volts) / instrument.esa.volts_per_second_max
-        settle = max(instrument.accelerating.settle, instrument.esa.settle)
-        # the read-back that proves arrival comes with the next poll
-        poll = instrument.devices.accelerating.poll
-        answer.append(max(accel, esa) + settle + 0.5 * (poll + tick) + _detector_seconds(stop, instrument))
+    for (station_before, before), (station, stop) in zip((stops[-1], *stops[:-1]), stops, strict=True):
+        wait = _jump_seconds(before, stop, instrument)
+        if station is not station_before:
+            ramp, landing = _move_seconds(station_before, station, instrument)
+            wait = ramp + max(landing, wait)
+        answer.append(wait + _detector_seconds(stop, instrument))
     return answer
+
+
+def _jump_seconds(before: Stop, stop: Stop, instrument: Instrument) -> float:
+    accel = abs(stop.accel_volts - before.accel_volts) / instrument.accelerating.volts_per_second_max
+    esa = abs(stop.esa_volts - before.esa_volts) / instrument.esa.volts_per_second_max
+    settle = max(instrument.accelerating.settle, instrument.esa.settle)
+    # the read-back that proves arrival comes with the next poll
+    poll, tick = instrument.devices.accelerating.poll, instrument.interlocks.tick
+    return max(accel, esa) + settle + 0.5 * (poll + tick)
 
 
 def _detector_seconds(stop: Stop, instrument: Instrument) -> float:
@@ -113,17 +121,11 @@ def _detector_seconds(stop: Stop, instrument: Instrument) -> float:
     return ELECTROMETER_SETTLES * instrument.electrometer.time_constant
 
 
-def _move_seconds(route: Route, instrument: Instrument) -> list[float]:
+def _move_seconds(before: Station, station: Station, instrument: Instrument) -> tuple[float, float]:
+    """Ramp, and landing after it."""
     magnet = instrument.magnet
-    stations: tuple[Station, ...] = route.stations
-    if len(stations) == 1:
-        return []
-    return [
-        abs(station.amps_estimate - before.amps_estimate) / magnet.amps_per_second_max
-        + LANDING_SECONDS
-        + magnet.field_hold
-        for before, station in zip((stations[-1], *stations[:-1]), stations, strict=True)
-    ]
+    ramp = abs(station.amps_estimate - before.amps_estimate) / magnet.amps_per_second_max
+    return ramp, LANDING_SECONDS + magnet.field_hold
 
 
 def _wide_points(instrument: Instrument) -> int:

@@ -5,8 +5,9 @@ accelerating voltage; heavier ones by lowering both voltages. The route uses the
 spans allow: with ions sorted by m/z, filling each station from its lightest ion as far as the span
 reaches is optimal (the classical covering of points by intervals of fixed ratio). Stations are visited
 in rising field, so that every cycle approaches each field the same way, with one wrap at its end; inside
-a station the stops go by falling voltage. Both orders are the shortest closed walks on a line: any
-other order travels at least as far up and down.
+a station the stops go by falling voltage. No other order has less dead time: a closed walk over points
+of a line travels at least twice its length (the magnet, and the voltages of a lone station), an open one
+at least once (the voltages of one station among several, whose first jump hides behind the field's move).
 """
 
 from __future__ import annotations
@@ -15,11 +16,13 @@ from dataclasses import dataclass
 from math import ceil
 
 from controller.config.instrument import Instrument
+from controller.config.load import line_at
 from controller.config.sequence import BackgroundSettings, IonSettings, Sequence, StationSettings
 from controller.errors import ConfigRefused
 from controller.physics.fields import esa_volts, field_tesla, jump_volts
 from controller.physics.ions import Ion, parse_ion
 from controller.physics.magnet_model import MagnetModel, OutsideRange
+from controller.physics.peak import peak_widths
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,17 +90,23 @@ class _Planner:
         return Route(tuple(stations))
 
     def _refuse(self, problem: str, key: str, value: object, limit: str, next_action: str) -> ConfigRefused:
+        line = line_at(self.text, key)
         return ConfigRefused(
-            problem, file=self.file, key=key, value=value, limit=limit, next_action=next_action
+            problem, file=self.file, line=line, key=key, value=value, limit=limit, next_action=next_action
         )
 
-    def _ion(self, item: IonSettings, place: int) -> Ion:
-        try:
-            return parse_ion(item.ion)
-        except ValueError as error:
-            raise self._refuse(
-                str(error), f"ions[{place}].ion", item.ion, "a known ion", "correct the label"
-            ) from None
+    def _refuse_same_names(self, groups: list[_Group]) -> None:
+        """What a run learns of a station (current, centre) is kept by its name."""
+        names = [group.name for group in groups]
+        for place, station in enumerate(self.sequence.stations):
+            if names.count(station.name) > 1:
+                raise self._refuse(
+                    "a station that the route chose has this name",
+                    f"stations[{place}].name",
+                    station.name,
+                    "a name of its own",
+                    "choose another name",
+                )
 
     def _fewest_groups(self, ions: list[tuple[IonSettings, Ion]]) -> list[_Group]:
         groups: list[list[tuple[IonSettings, Ion]]] = []
@@ -169,6 +178,17 @@ class _Planner:
         brightest = max(group.ions, key=lambda pair: pair[0].expected_rate or 0.0)[1].label
         return Station(group.name, reference, tesla, amps, group.centre_on or brightest, stops)
 
+    def _reaches(self, reference: Ion, mass_to_charge: float) -> bool:
+        accelerating = self.instrument.accelerating
+        volts = jump_volts(
+            accelerating.nominal, reference.mass_to_charge, mass_to_charge, accelerating.source_offset
+        )
+        ratio = max(mass_to_charge, reference.mass_to_charge) / min(mass_to_charge, reference.mass_to_charge)
+        rounding = 1.0 + 1e-12  # an ion exactly at the end of the span belongs to it
+        return self.volts_min <= volts * rounding and (
+            volts <= accelerating.volts_max and ratio <= self.span * rounding
+        )
+
     def _stop(
         self,
         station: str,
@@ -184,9 +204,8 @@ class _Planner:
         volts = jump_volts(
             accelerating.nominal, reference.mass_to_charge, mass_to_charge, accelerating.source_offset
         )
-        low, high = accelerating.nominal * (1.0 - accelerating.jump_span), accelerating.volts_max
-        ratio = max(mass_to_charge, reference.mass_to_charge) / min(mass_to_charge, reference.mass_to_charge)
-        if not low <= volts <= high or ratio > self.span * (1 + 1e-12):
+        low, high = self.volts_min, accelerating.volts_max
+        if not self._reaches(reference, mass_to_charge):
             raise self._refuse(
                 f"outside the voltage span of station {station!r}: it needs {volts:.1f} V",
                 key,
@@ -223,9 +242,11 @@ class _Planner:
                 f"one of {', '.join(s.name for s in stations)}",
                 "correct the name or leave the key out",
             )
+        self._refuse_on_a_peak(item, place)
 
-        def distance(station: Station) -> float:
-            return min(abs(stop.mass_to_charge - item.mass_to_charge) for stop in station.stops)
+        def distance(station: Station) -> tuple[bool, float]:
+            unreached = not self._reaches(station.reference, item.mass_to_charge)
+            return unreached, min(abs(s.mass_to_charge - item.mass_to_charge) for s in station.stops)
 
         station = min(named, key=distance)
         stop = self._stop(
@@ -233,11 +254,18 @@ class _Planner:
             item.detector, f"backgrounds[{place}].mass_to_charge",
         )  # fmt: skip
         stops = tuple(sorted((*station.stops, stop), key=lambda s: s.mass_to_charge))
-        stations[stations.index(station)] = Station(
-            station.name,
-            station.reference,
-            station.field_tesla,
-            station.amps_estimate,
-            station.centre_on,
-            stops,
-        )
+        stations[stations.index(station)] = replace(station, stops=stops)
+
+    def _refuse_on_a_peak(self, item: BackgroundSettings, place: int) -> None:
+        labels = [ion.ion for ion in self.sequence.ions]
+        labels += [isobar.interfering for isobar in self.sequence.interferences]
+        for label in labels:
+            apart = item.mass_to_charge / parse_ion(label).mass_to_charge - 1.0
+            if abs(apart) < 0.5 * self.peak_base:
+                raise self._refuse(
+                    f"this background position lies on the peak of {label}",
+                    f"backgrounds[{place}].mass_to_charge",
+                    item.mass_to_charge,
+                    f"at least {1e6 * 0.5 * self.peak_base:.0f} ppm from every ion",
+                    "move it away, for instance to a half mass",
+                )
