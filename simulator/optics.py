@@ -187,9 +187,11 @@ def peak_table(spec: OpticsSpec, layout: Layout) -> Table:
     beam = np.convolve(_box(x, image), _aberration(x, reach), mode="same")
     seen = np.convolve(beam, _box(x, spec.collector_slit), mode="same")
     seen = seen / (_box(x, spec.collector_slit).max() * beam.sum())
-    # a heavier ion lands outward, at D gamma; the table is asked with gamma
+    # a heavier ion lands outward, at D gamma; the table is asked with gamma. seen[k] is the share when the
+    # slit's centre lies at x[k] from the axial ray, which then lies at -x[k] from the slit: mirror
     scale = layout.mass_dispersion
-    return Table(float(x[0] / scale), float(scale / (x[1] - x[0])), tuple(np.clip(seen, 0.0, 1.0).tolist()))
+    shares = tuple(np.clip(seen[::-1], 0.0, 1.0).tolist())
+    return Table(float(x[0] / scale), float(scale / (x[1] - x[0])), shares)
 
 
 def _aberration(x: NDArray[np.float64], reach: float) -> NDArray[np.float64]:

@@ -53,7 +53,7 @@ def test_the_everett_function_is_the_integral_of_the_density() -> None:
     assert (after - before) / 2 == pytest.approx(integral, rel=1e-9)
 
 
-@settings(max_examples=200, deadline=None)
+@settings(max_examples=200, deadline=None, derandomize=True)
 @given(INPUTS, st.floats(0.01, 3.9))
 def test_wiping_out_a_larger_extremum_erases_what_was_inside(inputs: list[float], top: float) -> None:
     """Mayergoyz: return-point memory. The way inside a closed excursion leaves no trace."""
@@ -62,7 +62,7 @@ def test_wiping_out_a_larger_extremum_erases_what_was_inside(inputs: list[float]
     assert outputs([*start, *inside, top])[-1] == pytest.approx(outputs(start)[-1], abs=1e-12)
 
 
-@settings(max_examples=200, deadline=None)
+@settings(max_examples=200, deadline=None, derandomize=True)
 @given(INPUTS)
 def test_congruent_loops_have_one_height_whatever_came_before(inputs: list[float]) -> None:
     """Mayergoyz: congruency."""
@@ -70,7 +70,7 @@ def test_congruent_loops_have_one_height_whatever_came_before(inputs: list[float
     assert abs(found[-1] - found[-2]) == pytest.approx(0.05994811632, abs=1e-9)
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=100, deadline=None, derandomize=True)
 @given(INPUTS)
 def test_the_output_never_falls_while_the_input_rises(inputs: list[float]) -> None:
     found = outputs(inputs)
@@ -111,3 +111,100 @@ def test_jiles_atherton_agrees_with_an_adaptive_integration() -> None:
     state = model.start((5000.0, -5000.0, 5000.0, -5000.0, 0.0))
     assert model.magnetisation(state) == pytest.approx(reversal[-1], rel=1e-4)
     assert abs(reversal[-1]) == pytest.approx(587472, rel=1e-4)
+
+
+# An alternating sequence for the product logistic density, and its outputs from negative saturation.
+SEQUENCE = [2, -1, 1.2, -0.3, 0.6, 0.1, 1.5, -2, 0.7, -0.2, 3]
+SEQUENCE_OUTPUTS = [
+    0.551607, -0.197128, 0.302039, 0.066786, 0.163673, 0.134547,
+    0.404869, -0.608444, -0.005676, -0.100743, 0.814795,
+]  # fmt: skip
+
+
+def test_the_reference_sequence_on_a_grid_of_relays_and_on_the_stack() -> None:
+    """Mayergoyz' definition: 400 x 400 relays, each by itself, cells of equal weight.
+
+    Tolerance 1/N of the output's range of two: the inputs lie between the levels of the grid.
+    """
+    n = 400
+    middle = (np.arange(n) + 0.5) / n
+    levels = np.log(middle / (1 - middle))  # quantiles of the logistic density
+    up, down = levels[:, None], levels[None, :]
+    weight = np.where(up > down, 2.0, np.where(up == down, 1.0, 0.0)) / n**2
+    state = np.full((n, n), -1.0)
+    stack = outputs([float(u) for u in SEQUENCE])
+    for u, found, reference in zip(SEQUENCE, stack, SEQUENCE_OUTPUTS, strict=True):
+        state = np.where(up <= u, 1.0, np.where(down >= u, -1.0, state))
+        assert float((weight * state).sum()) == pytest.approx(found, abs=2 * (1 / n))
+        assert found == pytest.approx(reference, abs=1e-6)
+
+
+@settings(max_examples=100, deadline=None, derandomize=True)
+@given(INPUTS, st.floats(0.2, 5.0))
+def test_the_width_only_scales_the_input(inputs: list[float], sigma: float) -> None:
+    """Of the product density: an output depends on u/sigma alone; coercivity is sigma ln(1 + sqrt 2)."""
+    model = Preisach(sigma)
+    state = model.start(())
+    for u, expected in zip(inputs, outputs(inputs), strict=True):
+        state = model.advance(state, u * sigma)
+        assert model.output(state) == pytest.approx(expected, abs=1e-9)
+    coercive = model.start((60 * sigma, -60 * sigma, 0.8813735870 * sigma))
+    assert model.output(coercive) == pytest.approx(0.0, abs=1e-9)
+
+
+@settings(max_examples=100, deadline=None, derandomize=True)
+@given(INPUTS, st.lists(st.floats(0, 1), max_size=6))
+def test_it_does_not_matter_in_how_many_steps_an_input_is_reached(
+    inputs: list[float], parts: list[float]
+) -> None:
+    """Rate independence: the classical scalar model has no time."""
+    fine: list[float] = []
+    for u in inputs:
+        last = fine[-1] if fine else -5.0
+        fine += [*sorted((last + part * (u - last) for part in parts), reverse=u < last), u]
+    assert outputs(fine)[-1] == pytest.approx(outputs(inputs)[-1], abs=1e-9)
+
+
+def test_a_state_that_was_kept_is_not_changed_by_what_comes_after() -> None:
+    model = Preisach(1.0)
+    kept = model.start((2.0, -1.0, 0.5))
+    before = model.output(kept)
+    later = model.advance(model.advance(kept, 3.0), -3.0)
+    assert model.output(later) != before
+    assert model.output(kept) == before
+    assert model.output(model.advance(kept, 2.0)) == pytest.approx(0.551607, abs=1e-6)
+
+
+def test_the_coercive_field_of_the_jiles_atherton_loop() -> None:
+    """407.334 A/m and 587 472 A/m at 5 kA/m: scipy's event finder on the 1986 form, written again here."""
+
+    def langevin(x: float) -> tuple[float, float]:
+        if abs(x) < 1e-2:  # Taylor
+            return x / 3 - x**3 / 45, 1 / 3 - x**2 / 15
+        return 1 / math.tanh(x) - 1 / x, 1 / x**2 - 1 / math.sinh(x) ** 2
+
+    def slope(h: float, y: np.ndarray, sign: float) -> list[float]:
+        value, derivative = langevin((h + 1.6e-3 * y[0]) / 1100.0)
+        gap = 1.6e6 * value - y[0]
+        jump = gap / (400.0 * sign - 1.6e-3 * gap) if gap * sign > 0 else 0.0
+        return [(jump + 0.2 * 1.6e6 / 1100.0 * derivative) / 1.2]
+
+    def crosses(h: float, y: np.ndarray, sign: float) -> float:
+        return float(y[0])
+
+    h, m, coercive, remanent = 0.0, 0.0, 0.0, 0.0
+    for goal in (5000.0, -5000.0, 5000.0, -5000.0, 5000.0):
+        sign = math.copysign(1.0, goal - h)
+        found = solve_ivp(
+            slope, (h, goal), [m], args=(sign,), method="LSODA", rtol=1e-9, atol=1e-3,
+            events=crosses, dense_output=True, max_step=50.0,
+        )  # fmt: skip
+        h, m = goal, float(found.y[0, -1])
+        coercive, remanent = float(found.t_events[0][-1]), float(found.sol(0.0)[0])
+    assert coercive == pytest.approx(407.334, rel=1e-5)
+    assert remanent == pytest.approx(-587472, rel=1e-5)
+    model = JilesAtherton(field_per_input=500.0)  # 5 kA/m at an input of 10
+    loop = model.start((10.0, -10.0, 10.0, -10.0))
+    assert model.magnetisation(model.advance(loop, coercive / 500.0)) == pytest.approx(0.0, abs=50.0)
+    assert model.magnetisation(model.advance(loop, 0.0)) == pytest.approx(remanent, rel=1e-5)
+    assert model.output(model.advance(loop, 0.0)) == pytest.approx(-0.5, rel=2e-2)
