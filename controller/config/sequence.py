@@ -62,8 +62,8 @@ class BackgroundSettings(Settings):
 class Quotient(Settings):
     """Two different ions, one over the other."""
 
-    numerator: IonLabel
-    denominator: IonLabel
+    numerator: Text
+    denominator: Text
 
     @model_validator(mode="after")
     def _two_ions(self) -> Self:
@@ -79,23 +79,16 @@ class RatioSettings(Quotient):
 class InterferenceSettings(Settings):
     """Isobar ``interfering`` lies on ion ``on``; its size follows from ``monitor``."""
 
-    on: IonLabel
+    on: Text
     interfering: IonLabel
-    monitor: IonLabel
+    monitor: Text
     ratio: Number = Field(gt=0)  # interfering / monitor, true (unfractionated) ratio
     u: Number = Field(ge=0)
 
     @model_validator(mode="after")
-    def _lies_on_it(self) -> Self:
+    def _monitor_is_another(self) -> Self:
         if self.monitor == self.on:
             raise FaultAt(f"{self.on} cannot monitor what lies on itself", "monitor")
-        apart = parse_ion(self.interfering).mass_to_charge / parse_ion(self.on).mass_to_charge - 1
-        if abs(apart) > ISOBAR:
-            raise FaultAt(
-                f"{self.interfering} does not lie on {self.on}: {apart:+.2%} apart in m/z, "
-                f"limit {ISOBAR:.1%}",
-                "interfering",
-            )
         return self
 
 
@@ -158,6 +151,18 @@ class Sequence(Settings):
         for label, path in named:
             if label not in labels:
                 raise FaultAt(f"{label!r} is not an ion of this sequence ({', '.join(labels)})", *path)
+        return self
+
+    @model_validator(mode="after")
+    def _isobars_lie_on_their_ions(self) -> Self:
+        for i, item in enumerate(self.interferences):
+            apart = parse_ion(item.interfering).mass_to_charge / parse_ion(item.on).mass_to_charge - 1
+            if abs(apart) > ISOBAR:
+                raise FaultAt(
+                    f"{item.interfering} does not lie on {item.on}: {apart:+.2%} apart in m/z, "
+                    f"limit {ISOBAR:.1%}",
+                    *("interferences", i, "interfering"),
+                )
         return self
 
 

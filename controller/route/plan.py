@@ -12,7 +12,7 @@ at least once (the voltages of one station among several, whose first jump hides
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import ceil
 
 from controller.config.instrument import Instrument
@@ -67,22 +67,31 @@ class _Group:
     ions: tuple[tuple[IonSettings, Ion], ...]
 
 
-def plan_route(sequence: Sequence, instrument: Instrument, file: str = "sequence file") -> Route:
-    """The route of a sequence on an instrument. Raises ConfigRefused for what cannot be reached."""
-    return _Planner(sequence, instrument, file).route()
+def plan_route(
+    sequence: Sequence, instrument: Instrument, file: str = "sequence file", text: str = ""
+) -> Route:
+    """The route of a sequence on an instrument. Raises ConfigRefused for what cannot be reached.
+
+    ``file`` and its ``text`` give a refusal its place.
+    """
+    return _Planner(sequence, instrument, file, text).route()
 
 
 class _Planner:
-    def __init__(self, sequence: Sequence, instrument: Instrument, file: str) -> None:
-        self.sequence, self.instrument, self.file = sequence, instrument, file
+    def __init__(self, sequence: Sequence, instrument: Instrument, file: str, text: str) -> None:
+        self.sequence, self.instrument, self.file, self.text = sequence, instrument, file, text
         self.magnet = MagnetModel(instrument.magnet)
         accelerating = instrument.accelerating
-        # the ratio of m/z that the voltage can span about a reference at nominal
-        self.span = min(sequence.run.span_max, 1.0 / (1.0 - accelerating.jump_span))
+        self.volts_min = accelerating.nominal * (1.0 - accelerating.jump_span)
+        # the ratio of m/z that the voltage can span below a reference at nominal
+        offset = accelerating.source_offset
+        self.span = min(sequence.run.span_max, (accelerating.nominal + offset) / (self.volts_min + offset))
+        self.peak_base = peak_widths(instrument.geometry).base
 
     def route(self) -> Route:
-        ions = [(item, self._ion(item, place)) for place, item in enumerate(self.sequence.ions)]
+        ions = [(item, parse_ion(item.ion)) for item in self.sequence.ions]
         groups = self._named_groups(ions) + self._fewest_groups([p for p in ions if p[0].station is None])
+        self._refuse_same_names(groups)
         groups.sort(key=lambda group: group.reference.mass_to_charge)
         stations = [self._station(group) for group in groups]
         for place, background in enumerate(self.sequence.backgrounds):
