@@ -34,7 +34,7 @@ class MagnetTwin(OutputTwin):
         super().__init__("magnet", plant, now, rng, (spec.amps_max, spec.slew))
         self.set_amps = 0.0
         self.stuck = False
-        self.deviation = 0.0
+        self.deviation = 0.0  # fault: the supply drives this fraction more than it was asked
         self._warm = (-1.0, 293.0)
 
     def status(self, t: float) -> int:
@@ -43,7 +43,7 @@ class MagnetTwin(OutputTwin):
 
     def values(self, t: float) -> tuple[float, ...]:
         magnet = self.plant.magnet
-        amps = magnet.amps(t) * (1.0 + self.deviation)
+        amps = magnet.amps(t)
         return (amps + 1e-5 * self.normal(), magnet.coil_volts(t), self.set_amps, self._kelvin(t, amps))
 
     def _kelvin(self, t: float, amps: float) -> float:
@@ -58,15 +58,37 @@ class MagnetTwin(OutputTwin):
     def apply(self, t: float, value: float) -> Answer:
         self.set_amps = value
         if self.plant.magnet.enabled and not self.stuck:
-            self.plant.magnet.command(t, value)
+            self._drive(t)
         self.plant.log.add(t, "magnet set", value)
         return (DONE,)
 
     def turn_on(self, t: float) -> Answer:
         self.plant.magnet.enabled = True
-        self.plant.magnet.command(t, self.set_amps)
+        if not self.stuck:
+            self._drive(t)
         self.plant.log.add(t, "magnet on")
         return (DONE,)
+
+    def _drive(self, t: float) -> None:
+        self.plant.magnet.command(t, self.set_amps * (1.0 + self.deviation))
+
+    def deviate(self, t: float, fraction: float) -> None:
+        """Fault: from now on the current is off by a fraction of what was asked."""
+        self.deviation = fraction
+        if not self.stuck:
+            self._drive(t)
+
+    def stick(self) -> None:
+        """Fault: from now on commands are acknowledged and the current does not follow."""
+        self.stuck = True
+
+    def release(self, t: float) -> None:
+        """The current follows again, to what it was told while it did not."""
+        self.stuck = False
+        self._drive(t)  # a supply that was switched off meanwhile was set to zero
+
+    def hold_slew(self, per_second: float) -> None:
+        self.plant.magnet.slew = per_second
 
     def turn_off(self, t: float) -> None:
         """The device ramps down by itself before it opens anything."""
@@ -120,6 +142,9 @@ class SupplyTwin(OutputTwin):
     def apply(self, t: float, value: float) -> Answer:
         self.plant.write(t, self.role, value)
         return (DONE,)
+
+    def hold_slew(self, per_second: float) -> None:
+        self.supply.slew = per_second
 
     def turn_on(self, t: float) -> Answer:
         if self.supply.tripped:
@@ -181,11 +206,12 @@ class PermitTwin(Twin):
 
 
 class GateTwin(Twin):
-    """A detector's gate: opened now, integrated when it is read."""
+    """A detector's gate: opened now, integrated when it is first read."""
 
     def __init__(self, role: str, plant: Plant, now: Callable[[], float], rng: np.random.Generator) -> None:
         super().__init__(role, plant, now, rng)
         self.gate: tuple[float, float] | None = None
+        self._answer: Answer = None  # of a gate that was read: it has one total, however often it is asked
 
     def status(self, t: float) -> int:
         return REMOTE | (GATE if self.gate is not None and t < self.gate[1] else 0)
@@ -195,14 +221,16 @@ class GateTwin(Twin):
             if len(values) != 1 or not 0.0 < values[0] <= 3600.0:
                 return (2.0,)
             self.opened(t)
-            self.gate = (t, t + values[0])
+            self.gate, self._answer = (t, t + values[0]), None
             return (DONE,)
         if verb == "gate_read":
             if self.gate is None or t < self.gate[1] - 1e-9:
                 return (NOT_READY,)
-            start, end = self.gate
-            total, over = self.integrate(start, end)
-            return (DONE, start, end, end - start, total, 1.0 if over else 0.0)
+            if self._answer is None:
+                start, end = self.gate
+                total, over = self.integrate(start, end)
+                self._answer = (DONE, start, end, end - start, total, 1.0 if over else 0.0)
+            return self._answer
         return (UNKNOWN,)
 
     def opened(self, t: float) -> None:
@@ -222,8 +250,11 @@ class CounterTwin(GateTwin):
 
     def integrate(self, start: float, end: float) -> tuple[float, bool]:
         plant = self.plant
-        efficiency = plant.counter.efficiency(plant.supplies["detector"].volts(end))
-        rate = plant.mean_ions(start, end) * efficiency
+        detector, efficiency = plant.supplies["detector"], plant.counter.efficiency
+        if detector.steady(start, end):
+            rate = plant.mean_ions(start, end) * efficiency(detector.volts(end))
+        else:
+            rate = plant.mean_ions(start, end, lambda t: efficiency(detector.volts(t)))
         return plant.counter.draw(rate, end - start), rate > plant.spec.detectors.rate_max
 
 

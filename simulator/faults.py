@@ -49,35 +49,42 @@ def _vacuum(which: str) -> Callable[[Plant, dict[str, Any], ScheduledFault], tup
 
 
 def _arc(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
-    return plant.supplies[fault.role or "accelerating"].arc, lambda t: None
+    role = fault.role or "accelerating"
+    if role not in plant.supplies:
+        raise ValueError(f"fault {fault.kind!r}: {role!r} is not a high-voltage supply")
+    return plant.supplies[role].arc, lambda t: None
 
 
-def _attribute(
-    name: str, begin: Callable[[ScheduledFault], Any], end: Any
-) -> Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change, Change]]:
-    def make(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
-        target = _target(plant, twins, fault, name)
-        return lambda t: setattr(target, name, begin(fault)), lambda t: setattr(target, name, end)
-
-    return make
+def _deviates(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+    output = _output(plant, twins, fault)
+    return lambda t: output.deviate(t, fault.size or 0.05), lambda t: output.deviate(t, 0.0)
 
 
-def _target(plant: Plant, twins: dict[str, Any], fault: ScheduledFault, name: str) -> Any:
+def _stuck(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
+    output = _output(plant, twins, fault)
+    return lambda t: output.stick(), output.release
+
+
+def _output(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> Any:
+    """What has a set-point: a high-voltage supply, or the magnet's."""
+    twin = _device(twins, fault)
+    output = plant.supplies.get(fault.role or "", twin)
+    if not hasattr(output, "deviate"):
+        raise ValueError(f"fault {fault.kind!r}: {fault.role!r} is not an output with a set-point")
+    return output
+
+
+def _device(twins: dict[str, Any], fault: ScheduledFault) -> Any:
     if fault.role is None:
         raise ValueError(f"fault {fault.kind!r} needs a role")
     if fault.role not in twins:
         raise ValueError(f"fault {fault.kind!r}: no device has the role {fault.role!r}")
-    if name in ("deviation", "stuck"):
-        target = plant.supplies.get(fault.role, twins[fault.role])
-        if not hasattr(target, name):
-            raise ValueError(f"fault {fault.kind!r}: {fault.role!r} is not an output with a set-point")
-        return target
     return twins[fault.role]
 
 
 def _misbehaves(word: str) -> Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change, Change]]:
     def make(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> tuple[Change, Change]:
-        twin = _target(plant, twins, fault, word)
+        twin = _device(twins, fault)
         return lambda t: twin.misbehave(**{word: True}), lambda t: twin.misbehave()
 
     return make
@@ -90,8 +97,8 @@ KINDS: dict[str, Callable[[Plant, dict[str, Any], ScheduledFault], tuple[Change,
     "analyser vacuum lost": _vacuum("analyser"),
     "emergency stop": _emergency,
     "arc": _arc,
-    "output deviates": _attribute("deviation", lambda fault: fault.size or 0.05, 0.0),
-    "output stuck": _attribute("stuck", lambda fault: True, False),
+    "output deviates": _deviates,
+    "output stuck": _stuck,
     "reading frozen": _misbehaves("frozen"),
     "reading garbled": _misbehaves("garbled"),
     "no reply": _misbehaves("silent"),

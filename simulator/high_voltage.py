@@ -47,7 +47,9 @@ class Supply:
         self.set_point = 0.0
         self.enabled = False
         self.tripped = False
-        self.deviation = 0.0  # fault: output off by this fraction
+        self.slew = spec.slew  # V/s; a supply's own limits may lower it
+        self.deviation = 0.0  # fault: output off by this fraction, now
+        self._deviations = [(-math.inf, 0.0)]  # since when, by what: a gate looks back
         self.stuck = False  # fault: acknowledges, does nothing
         self.arc_until = -1.0
 
@@ -68,6 +70,23 @@ class Supply:
         if not self.stuck:
             self._open(t, 0.0, off=True)
 
+    def deviate(self, t: float, fraction: float) -> None:
+        """Fault: from now on the output is off by a fraction of itself."""
+        self.deviation = fraction
+        self._deviations.append((t, fraction))
+
+    def stick(self) -> None:
+        """Fault: from now on commands are acknowledged and the output does not follow."""
+        self.stuck = True
+
+    def release(self, t: float) -> None:
+        """The output follows again, to what it was told while it did not."""
+        self.stuck = False
+        if self.enabled:
+            self._open(t, self.set_point, off=False)
+        else:
+            self._open(t, 0.0, off=True)
+
     def arc(self, t: float) -> None:
         """Collapse, over-current, own trip."""
         self.tripped = True
@@ -86,19 +105,33 @@ class Supply:
 
     def volts(self, t: float) -> float:
         """The true output."""
-        return self.nominal(t) * (1.0 + self.divider + self.deviation) * (1.0 + self._ripple(t))
+        deviation = self.deviation if t >= self._deviations[-1][0] else self._deviation_at(t)
+        return self.nominal(t) * (1.0 + self.divider + deviation) * (1.0 + self._ripple(t))
 
     def events_between(self, start: float, end: float) -> list[float]:
         """Times of commands inside an interval: a gate's integral is cut there."""
         low, high = bisect.bisect_right(self._starts, start), bisect.bisect_left(self._starts, end)
-        return self._starts[low:high]
+        changed = self._starts[low:high]
+        if len(self._deviations) > 1:
+            changed += [at for at, _ in self._deviations if start < at < end]
+        return changed
+
+    def _deviation_at(self, t: float) -> float:
+        return next(fraction for at, fraction in reversed(self._deviations) if at <= t)
+
+    def steady(self, start: float, end: float) -> bool:
+        """Whether the output stood still, settling apart, throughout an interval."""
+        segment = self._segments[-1]
+        if segment.start > start:
+            return False
+        return self._flat_from <= start or not (segment.off or segment.slew_end > start)
 
     def moving(self, t: float) -> bool:
         return t < self._segments[-1].slew_end
 
     def _open(self, t: float, goal: float, *, off: bool) -> None:
         here = self.nominal(t)
-        slew_end = t if off else t + abs(goal - here) / self.spec.slew
+        slew_end = t if off else t + abs(goal - here) / self.slew
         self._append(Segment(t, here, goal, slew_end, off))
 
     def _append(self, segment: Segment) -> None:

@@ -20,6 +20,7 @@ from simulator.noise import Wander
 from simulator.spec import MagnetSpec
 
 SEGMENTS_KEPT = 600  # a gate looks back over no more set-points than this
+REACHABLE = 0.999  # of compliance over resistance: the last part would take for ever
 FULL_FIELD_A_PER_M = 5000.0  # input of the Jiles-Atherton set at full current
 
 
@@ -63,6 +64,7 @@ class Magnet:
         self._segments = [Segment(0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, still, past)]
         self._starts = [0.0]
         self.enabled = False
+        self.slew = spec.slew  # A/s; a supply's own limits may lower it
         self._eddy = tuple(zip(self.eddy_amplitudes, (-1.0 / s for s in self.eddy_seconds), strict=True))
         # of the segment that holds: static field, and each mode's amplitude (in A) at its end
         self._held: tuple[Segment, float, tuple[float, ...]] | None = None
@@ -72,16 +74,18 @@ class Magnet:
     def command(self, t: float, goal: float) -> None:
         """Begin to move to ``goal`` in A at time ``t`` (not before the last command)."""
         spec = self.spec
+        # a supply cannot drive more than its compliance through its coil
+        goal = min(goal, REACHABLE * spec.compliance / spec.resistance)
         goal = round(goal / spec.resolution) * spec.resolution
         here, modes, history = self._state(t)
         sign = math.copysign(1.0, goal - here)
-        rate = sign * spec.slew
+        rate = sign * self.slew
         # the supply can hold the slew until L dI/dt + R I meets its compliance
         limit = (sign * spec.compliance - spec.inductance * rate) / spec.resistance
         turn = goal if (goal - limit) * sign <= 0 else limit
         if (turn - here) * sign < 0:
             turn = here
-        linear_end = t + (abs(turn - here) / spec.slew if turn != here else 0.0)
+        linear_end = t + (abs(turn - here) / self.slew if turn != here else 0.0)
         asymptote = sign * spec.compliance / spec.resistance
         end = linear_end
         if turn != goal:

@@ -21,6 +21,7 @@ from simulator.spec import PlantSpec, SourceSpec, SpeciesSpec, TruthEvent
 
 HIGH_VOLTAGE = ("accelerating", "esa", "detector")
 CHAIN_SECONDS = 0.05  # contactor opening time
+DISTURBED_PARTS = 200  # of a gate in which something was changed
 
 
 class TruthLog:
@@ -130,7 +131,12 @@ class Plant:
         self.inputs[name] = value
         self.log.add(t, f"input {name}", value)
         if not self.chain_closed() and self.spec.services.hardwired_chain:
-            self.timeline.add(t + CHAIN_SECONDS, self.cut)
+            self.timeline.add(t + CHAIN_SECONDS, self._drop_out)
+
+    def _drop_out(self, t: float) -> None:
+        """The contactor has had its time: it drops unless the chain was closed again meanwhile."""
+        if not self.chain_closed():
+            self.cut(t)
 
     def chain_closed(self) -> bool:
         healthy = all(self.inputs[name] for name in ("cover_a", "cover_b", "emergency_stop"))
@@ -165,9 +171,17 @@ class Plant:
                 answer = is_open
         return answer
 
-    def mean_ions(self, start: float, end: float) -> float:
-        """Mean of ``ions`` over a gate, cut where somebody changed something."""
+    def mean_ions(self, start: float, end: float, share: Callable[[float], float] | None = None) -> float:
+        """Mean over a gate of ``ions`` (times a share that changes with time), in 1/s.
+
+        A gate in which a source or a high voltage was changed is cut there, and into fine parts: what
+        follows a change may end at any time after it.
+        """
         cuts = {at for at, _ in self._source_changes if start < at < end}
-        for role in ("accelerating", "esa"):
+        for role in HIGH_VOLTAGE if share is not None else ("accelerating", "esa"):
             cuts.update(self.supplies[role].events_between(start, end))
-        return mean_rate(self.ions, start, end, sorted(cuts))
+        if cuts or share is not None:
+            cuts.update(start + (end - start) * part / DISTURBED_PARTS for part in range(1, DISTURBED_PARTS))
+        if share is None:
+            return mean_rate(self.ions, start, end, sorted(cuts))
+        return mean_rate(lambda t: self.ions(t) * share(t), start, end, sorted(cuts))

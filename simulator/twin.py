@@ -166,6 +166,7 @@ class OutputTwin(Twin):
             return (OUTSIDE,)
         self.maximum, self.watchdog = values[0], values[2]
         self.slew = min(values[1], self.hard_slew)
+        self.hold_slew(self.slew)
         return (DONE,)
 
     def _arm(self) -> None:
@@ -187,6 +188,10 @@ class OutputTwin(Twin):
             self._timeline.add(due, self._watch)
 
     def apply(self, t: float, value: float) -> Answer:
+        raise NotImplementedError
+
+    def hold_slew(self, per_second: float) -> None:
+        """Move no faster than this from the next command on."""
         raise NotImplementedError
 
     def turn_on(self, t: float) -> Answer:
