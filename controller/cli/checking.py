@@ -129,10 +129,11 @@ def show_forecast(job: Job, expected: Forecast, screen: Screen) -> None:
         f"(duty {100 * expected.duty:.0f} %); the whole takes about {duration(expected.total_seconds)}"
     )
     for ratio in expected.ratios:
+        pairs = zip(ratio.labels, ratio.best_seconds, strict=True)
         screen.say(
             f"  {ratio.name}: {1e6 * ratio.u_relative:.0f} ppm from counting alone; "
             f"{1e6 * ratio.best_u_relative:.0f} ppm with the dwells "
-            f"{ratio.best_seconds[0]:.2f} s and {ratio.best_seconds[1]:.2f} s"
+            + ", ".join(f"{label} {seconds:.2f} s" for label, seconds in pairs)
         )
 
 

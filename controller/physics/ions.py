@@ -1,4 +1,7 @@
-"""Ions by label: "208Pb+", "238U16O+", "208Pb++", "40Ar_2+" (a count follows an underscore)."""
+"""Ions by label: "208Pb+", "238U16O+", "208Pb++", "40Ar_2+", "16O1H_3+".
+
+A count follows an underscore and stands last: in "1H_316O+" nobody could tell where it ends.
+"""
 
 from __future__ import annotations
 
@@ -10,8 +13,8 @@ from typing import NamedTuple
 from controller.physics.constants import ATOMIC_MASS, ELECTRON_MASS_U
 from controller.physics.nuclides import nuclides
 
-_WHOLE = re.compile(r"((?:\d+[A-Z][a-z]?(?:_\d+)?)+)(\++)")
-_PART = re.compile(r"(\d+)([A-Z][a-z]?)(?:_(\d+))?")
+_WHOLE = re.compile(r"((?:\d+[A-Z][a-z]?)+(?:_[1-9]\d?)?)(\++)", re.ASCII)
+_PART = re.compile(r"(\d+)([A-Z][a-z]?)(?:_(\d+))?", re.ASCII)
 MAX_CHARGE = 4
 
 
@@ -33,7 +36,7 @@ def parse_ion(label: str) -> Ion:
     if whole is None or len(whole.group(2)) > MAX_CHARGE:
         raise ValueError(
             f"{label!r} is not an ion label: write mass number and symbol of each atom, then its charge, "
-            "for example 208Pb+, 238U16O+, 208Pb++, 40Ar_2+"
+            "for example 208Pb+, 238U16O+, 208Pb++, 40Ar_2+ (a count stands last)"
         )
     table = nuclides()
     neutral = 0.0

@@ -7,10 +7,12 @@ jump that goes with a move is made while the field lands. The run reports the me
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 from controller.config.instrument import Instrument
-from controller.config.sequence import RatioSettings, Sequence
+from controller.config.sequence import NormalisationSettings, RatioSettings, Sequence
+from controller.physics.ions import parse_ion
 from controller.physics.peak import peak_widths
 from controller.route.dwell import counting_u, optimal_share
 from controller.route.plan import Route, Station, Stop
@@ -26,12 +28,16 @@ WIDE_SPAN = 4e-3  # of mass: what dividers, radii and field law may be off befor
 
 @dataclass(frozen=True, slots=True)
 class RatioForecast:
-    """Expected relative standard uncertainty of a ratio from counting alone, and the best dwells."""
+    """Expected relative standard uncertainty of a ratio from counting alone, and the best dwells.
+
+    ``best_seconds`` are those of ``labels``, the ions that the ratio is made of, in the same total time.
+    """
 
     name: str
+    labels: tuple[str, ...]
     u_relative: float
     best_u_relative: float
-    best_seconds: tuple[float, float]
+    best_seconds: tuple[float, ...]
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,25 +77,47 @@ def forecast(route: Route, sequence: Sequence, instrument: Instrument) -> Foreca
         total_seconds=total,
         expected_counts={label: rate * dwells[label] * cycles for label, rate in rates.items()},
         ratios=tuple(
-            _ratio(item, rates, dwells, cycles)
+            _ratio(f"{item.numerator}/{item.denominator}", parts, rates, dwells, cycles)
             for item in sequence.ratios
-            if item.numerator in rates and item.denominator in rates
+            if (parts := log_parts(item, sequence.normalisation)) and rates.keys() >= parts.keys()
         ),
     )
 
 
+def log_parts(item: RatioSettings, normalisation: NormalisationSettings | None) -> dict[str, float]:
+    """Coefficients c of ln y = sum c_k ln n_k + const, by ion; empty for the normalising ratio itself.
+
+    With internal normalisation by the exponential law, y = (n_i/n_j)(m_i/m_j)^beta and
+    beta = ln(R_N n_b/n_a)/ln(m_a/m_b): the normalising ions share in the ratio's counting noise.
+    """
+    parts = {item.numerator: 1.0, item.denominator: -1.0}
+    if normalisation is not None and item.normalised:
+        i, j, a, b = (
+            parse_ion(label).neutral_u
+            for label in (
+                *(item.numerator, item.denominator),
+                *(normalisation.numerator, normalisation.denominator),
+            )
+        )
+        share = math.log(i / j) / math.log(a / b)
+        parts[normalisation.numerator] = parts.get(normalisation.numerator, 0.0) - share
+        parts[normalisation.denominator] = parts.get(normalisation.denominator, 0.0) + share
+    return {label: part for label, part in parts.items() if abs(part) > 1e-12}
+
+
 def _ratio(
-    item: RatioSettings, rates: dict[str, float], dwells: dict[str, float], cycles: int
+    name: str, parts: dict[str, float], rates: dict[str, float], dwells: dict[str, float], cycles: int
 ) -> RatioForecast:
-    pair = (item.numerator, item.denominator)
-    n = [rates[label] for label in pair]
-    t = [dwells[label] for label in pair]
-    best = optimal_share((1.0, -1.0), n, (0.0, 0.0), sum(t))
+    coefficients = tuple(parts.values())
+    n = [rates[label] for label in parts]
+    t = [dwells[label] for label in parts]
+    best = optimal_share(coefficients, n, [0.0] * len(n), sum(t))
     return RatioForecast(
-        f"{item.numerator}/{item.denominator}",
-        counting_u((1.0, -1.0), n, t, cycles),
-        best.u_relative / cycles**0.5,
-        (best.seconds[0], best.seconds[1]),
+        name=name,
+        labels=tuple(parts),
+        u_relative=counting_u(coefficients, n, t, cycles),
+        best_u_relative=best.u_relative / math.sqrt(cycles),
+        best_seconds=best.seconds,
     )
 
 
