@@ -110,6 +110,8 @@ def schedule(plant: Plant, twins: dict[str, Any], fault: ScheduledFault) -> None
     if fault.kind not in KINDS:
         raise ValueError(f"no fault is called {fault.kind!r}; known: {', '.join(KINDS)}")
     begin, end = KINDS[fault.kind](plant, twins, fault)
+    if fault.role is not None:
+        _device(twins, fault)
 
     def logged(change: Change, word: str) -> Change:
         def act(t: float) -> None:

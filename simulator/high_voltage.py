@@ -65,9 +65,15 @@ class Supply:
                 self._open(t, self.set_point, off=False)
 
     def disable(self, t: float) -> None:
-        """Switch off; also what the hardwired chain does."""
+        """Switch off."""
         self.enabled = False
         if not self.stuck:
+            self._open(t, 0.0, off=True)
+
+    def cut(self, t: float) -> None:
+        """The hardwired chain's contactor opens: off, whatever the supply's electronics do."""
+        self.enabled = False
+        if not self._segments[-1].off:
             self._open(t, 0.0, off=True)
 
     def deviate(self, t: float, fraction: float) -> None:

@@ -146,8 +146,7 @@ class Plant:
         """The chain opens: high voltage and source away; never the magnet."""
         self.before_change(t)
         for supply in self.supplies.values():
-            if supply.enabled:
-                supply.disable(t)
+            supply.cut(t)
         if self.source_open:
             self.source_open = False
             self._source_changes.append((t, False))

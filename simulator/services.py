@@ -14,16 +14,17 @@ class Level:
         self._log = logarithmic
         self._from = self._goal = math.log(value) if logarithmic else value
         self._since, self._seconds = 0.0, seconds
-        self.rest = value
+        self.rest = self._still = value
 
     def go(self, t: float, goal: float, seconds: float) -> None:
         self._from = self._at(t)
         self._goal = math.log(goal) if self._log else goal
+        self._still = goal
         self._since, self._seconds = t, seconds
 
     def at(self, t: float) -> float:
         if self._from == self._goal:
-            return self.rest
+            return self._still
         value = self._at(t)
         return math.exp(value) if self._log else value
 

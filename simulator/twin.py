@@ -6,6 +6,7 @@ it may not answer, answer with garbage, freeze, refuse, or acknowledge and do no
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from typing import Any
 
@@ -121,7 +122,7 @@ class OutputTwin(Twin):
         self.maximum, self.slew = limits
         self.watchdog = 0.0
         self._heard = 0.0
-        self._watching = False
+        self._watch_at = math.inf  # when the watchdog looks next
 
     def report(self) -> Any:
         """As of any twin (written out: it is run at every poll); being asked also feeds the watchdog."""
@@ -170,13 +171,17 @@ class OutputTwin(Twin):
         return (DONE,)
 
     def _arm(self) -> None:
-        if self.watchdog > 0 and not self._watching and self.is_on():
-            self._watching = True
-            self._timeline.add(self.now() + self.watchdog, self._watch)
+        due = self.now() + self.watchdog
+        # earlier than the next look only if none is due, or the watchdog was shortened
+        if self.watchdog > 0 and due < self._watch_at and self.is_on():
+            self._watch_at = due
+            self._timeline.add(due, self._watch)
 
     def _watch(self, t: float) -> None:
         """Off if nothing has been heard for the watchdog's time; else look again when it would be due."""
-        self._watching = False
+        if t != self._watch_at:  # a look that a shorter watchdog has replaced
+            return
+        self._watch_at = math.inf
         if not self.is_on() or self.watchdog <= 0:
             return
         due = self._heard + self.watchdog
@@ -184,7 +189,7 @@ class OutputTwin(Twin):
             self.plant.log.add(t, f"{self.role} watchdog")
             self.turn_off(t)
         else:
-            self._watching = True
+            self._watch_at = due
             self._timeline.add(due, self._watch)
 
     def apply(self, t: float, value: float) -> Answer:
