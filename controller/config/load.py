@@ -8,6 +8,7 @@ import re
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import reduce
 from typing import Any, Generic, TypeVar
 
 from pydantic import BaseModel, ValidationError
@@ -16,7 +17,7 @@ from controller.config.faults import Faults
 from controller.config.instrument import Instrument
 from controller.config.sample import Sample
 from controller.config.sequence import Sequence
-from controller.config.units import FaultAt
+from controller.config.units import FaultAt, Quantity
 from controller.errors import ConfigRefused
 
 Model = TypeVar("Model", bound=BaseModel)
@@ -117,16 +118,21 @@ def parse(text: str, name: str, model: type[Model]) -> Model:
     try:
         return model.model_validate(data)
     except ValidationError as error:
-        raise _refusal(error, text, name, model) from None
+        raise _refusal(error, data, text, name, model) from None
 
 
-def _refusal(error: ValidationError, text: str, name: str, model: type[BaseModel]) -> ConfigRefused:
+def _refusal(
+    error: ValidationError, data: Any, text: str, name: str, model: type[BaseModel]
+) -> ConfigRefused:
     # an unknown key first: it is often a missing one, misspelt
     faults = error.errors(include_url=False)
     first = next((fault for fault in faults if fault["type"] == "extra_forbidden"), faults[0])
     path = first["loc"]
     problem, limit, next_action = _words(first, model)
     value = first.get("input")
+    if limit is not None:  # the value as it was written, not converted; the limit in the unit of the field
+        value = reduce(lambda here, step: here[step], path, data)
+        limit = f"{limit} {unit_of(model, path)}".rstrip()
     cause = first.get("ctx", {}).get("error")
     if isinstance(cause, FaultAt):
         path, value = (*path, *cause.path), None  # the message has the values
@@ -177,6 +183,12 @@ def _words(fault: Any, model: type[BaseModel]) -> tuple[str, str | None, str]:
             return "not one of the choices", str(context["expected"]), "choose one of them"
         case "value_error":
             return str(context["error"]), None, "correct the value"
+        case "model_type" | "dict_type":
+            return "needs a table", None, f"write it under [{key_text(fault['loc'])}]"
+        case "tuple_type":
+            return "needs a list", None, "write [[...]] above each of its tables, or [...] around its values"
+        case "too_short":
+            return "is empty", None, f"enter {context['min_length']} or more"
     return str(fault["msg"]).lower(), None, "correct the value"
 
 
@@ -190,17 +202,34 @@ def nearest_key(wrong: str, known: list[str]) -> str | None:
     return words[near[0]] if near else None
 
 
+def unit_of(model: type[BaseModel], path: tuple[Any, ...]) -> str:
+    """The unit of the quantity at ``path``; empty for what has none."""
+    parent = _at(model, path[:-1])
+    field = getattr(parent, "model_fields", {}).get(path[-1])
+    parts = [*field.metadata, *getattr(field.annotation, "__args__", ())] if field is not None else []
+    for part in parts:
+        for mark in (part, *getattr(part, "__metadata__", ())):  # of `Seconds | None`, too
+            if isinstance(mark, Quantity):
+                return mark.unit
+    return ""
+
+
 def known_keys(model: type[BaseModel], path: tuple[Any, ...]) -> list[str]:
     """The keys that a table of the file may have."""
+    return list(getattr(_at(model, path), "model_fields", {}))
+
+
+def _at(model: type[BaseModel], path: tuple[Any, ...]) -> Any:
+    """The model of the table at ``path``; none if there is none."""
     here: Any = model
     for step in path:
         if isinstance(step, int):
             continue
         field = getattr(here, "model_fields", {}).get(step)
         if field is None:
-            return []
+            return None
         here = _model_in(field.annotation)
-    return list(getattr(here, "model_fields", {}))
+    return here
 
 
 def _model_in(annotation: Any) -> Any:
@@ -249,6 +278,8 @@ def line_of(text: str, path: tuple[Any, ...]) -> int | None:
             if not key:
                 continue
             here = (*table, *_steps(key.group(1)))
+        if isinstance(here[-1], int) and here[:-1] == path and len(path) > depth_best:
+            best, depth_best = number, len(path)  # the whole array, or [[run]] where [run] is wanted
         if len(here) > depth_best and path[: len(here)] == here:
             best, depth_best = number, len(here)
     return best

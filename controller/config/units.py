@@ -12,10 +12,19 @@ from __future__ import annotations
 
 import math
 import re
-from functools import cache
-from typing import TYPE_CHECKING, Annotated
+from dataclasses import dataclass
+from functools import cache, lru_cache
+from typing import TYPE_CHECKING, Annotated, Any
 
-from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Strict
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    GetCoreSchemaHandler,
+    Strict,
+)
+from pydantic_core import CoreSchema, core_schema
 
 if TYPE_CHECKING:
     from pint import UnitRegistry
@@ -53,6 +62,7 @@ def _registry() -> UnitRegistry:
     return registry
 
 
+@lru_cache(maxsize=512)  # a file writes the same quantities again and again
 def parse_quantity(text: str, unit: str) -> float:
     """The value of ``text`` in ``unit``. Raises ValueError with a message for a person."""
     parts = _QUANTITY.fullmatch(text.strip()) if len(text) <= LONGEST else None
@@ -94,18 +104,25 @@ def _short(value: object) -> str:
     return text if len(text) <= LONGEST else f"{text[:LONGEST]}..."
 
 
-def _quantity(unit: str, example: str) -> BeforeValidator:
-    def convert(value: object) -> float:
+@dataclass(frozen=True, slots=True)
+class Quantity:
+    """Marks a field as a quantity in ``unit``, read from texts like ``example``."""
+
+    unit: str
+    example: str
+
+    def __get_pydantic_core_schema__(self, source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:
+        return core_schema.no_info_before_validator_function(self._convert, handler(source))
+
+    def _convert(self, value: object) -> float:
         if isinstance(value, str):
             try:
-                return parse_quantity(value, unit)
+                return parse_quantity(value, self.unit)
             except ValueError as error:
-                raise ValueError(f"{error}; write for example {example!r}") from None
+                raise ValueError(f"{error}; write for example {self.example!r}") from None
         if value == 0 and not isinstance(value, bool):
             return 0.0  # zero is zero in any unit
-        raise ValueError(f"needs a unit, for example {example!r}")
-
-    return BeforeValidator(convert)
+        raise ValueError(f"needs a unit, for example {self.example!r}")
 
 
 def _number(value: object) -> float:
@@ -131,22 +148,22 @@ def _text(value: str) -> str:
     return value
 
 
-Volts = Annotated[float, _quantity("V", "8 kV")]
-Amps = Annotated[float, _quantity("A", "10 A")]
-Tesla = Annotated[float, _quantity("T", "0.9 T")]
-Seconds = Annotated[float, _quantity("s", "250 ms")]
-Metres = Annotated[float, _quantity("m", "300 mm")]
-Radians = Annotated[float, _quantity("rad", "90 deg")]
-Pascals = Annotated[float, _quantity("Pa", "1e-5 Pa")]
-Kelvin = Annotated[float, _quantity("K", "40 degC")]
-Ohms = Annotated[float, _quantity("ohm", "1e11 ohm")]
-Henries = Annotated[float, _quantity("H", "2 H")]
-PerSecond = Annotated[float, _quantity("1/s", "400 kHz")]
-VoltsPerSecond = Annotated[float, _quantity("V/s", "10 kV/s")]
-AmpsPerSecond = Annotated[float, _quantity("A/s", "5 A/s")]
-CubicMetresPerSecond = Annotated[float, _quantity("m**3/s", "6 l/min")]
-ElectronVolts = Annotated[float, _quantity("eV", "5 eV")]
-AtomicMass = Annotated[float, _quantity("u", "203.5 u")]
+Volts = Annotated[float, Quantity("V", "8 kV")]
+Amps = Annotated[float, Quantity("A", "10 A")]
+Tesla = Annotated[float, Quantity("T", "0.9 T")]
+Seconds = Annotated[float, Quantity("s", "250 ms")]
+Metres = Annotated[float, Quantity("m", "300 mm")]
+Radians = Annotated[float, Quantity("rad", "90 deg")]
+Pascals = Annotated[float, Quantity("Pa", "1e-5 Pa")]
+Kelvin = Annotated[float, Quantity("K", "40 degC")]
+Ohms = Annotated[float, Quantity("ohm", "1e11 ohm")]
+Henries = Annotated[float, Quantity("H", "2 H")]
+PerSecond = Annotated[float, Quantity("1/s", "400 kHz")]
+VoltsPerSecond = Annotated[float, Quantity("V/s", "10 kV/s")]
+AmpsPerSecond = Annotated[float, Quantity("A/s", "5 A/s")]
+CubicMetresPerSecond = Annotated[float, Quantity("m**3/s", "6 l/min")]
+ElectronVolts = Annotated[float, Quantity("eV", "5 eV")]
+AtomicMass = Annotated[float, Quantity("u", "203.5 u")]
 Fraction = Annotated[float, BeforeValidator(_fraction)]
 Number = Annotated[float, BeforeValidator(_number)]  # pure number: `true` and "1" are not
 Count = Annotated[int, Strict()]
