@@ -119,12 +119,12 @@ class SupplyTwin(OutputTwin):
 
     def status(self, t: float) -> int:
         supply = self.supply
-        return (
-            REMOTE
-            | (ENABLED if supply.enabled else 0)
-            | (TRIPPED if supply.tripped else 0)
-            | (MOVING if supply.moving(t) else 0)
-        )
+        bits = REMOTE | ENABLED if supply.enabled else REMOTE
+        if supply.tripped:
+            bits |= TRIPPED
+        if supply.moving(t):
+            bits |= MOVING
+        return bits
 
     def values(self, t: float) -> tuple[float, ...]:
         volts = self._volts(t)
@@ -273,10 +273,12 @@ class ElectrometerTwin(GateTwin):
 
 
 class GaugeTwin(Twin):
+    def __init__(self, role: str, plant: Plant, now: Callable[[], float], rng: np.random.Generator) -> None:
+        super().__init__(role, plant, now, rng)
+        self._level = plant.source_pressure if role == "source_gauge" else plant.analyser_pressure
+
     def values(self, t: float) -> tuple[float, ...]:
-        plant = self.plant
-        level = plant.source_pressure if self.role == "source_gauge" else plant.analyser_pressure
-        return (level.at(t) * (1.0 + GAUGE_NOISE * max(-3.0, min(3.0, self.normal()))),)
+        return (self._level.at(t) * (1.0 + GAUGE_NOISE * self.normal()),)
 
 
 class WaterTwin(Twin):
