@@ -149,7 +149,7 @@ def test_peak_widths_against_a_numerical_convolution(
 
 
 def test_a_geometry_that_cannot_focus_is_refused() -> None:
-    with pytest.raises(ValueError, match="no double focus: magnet radius 0.5 m is not below twice"):
+    with pytest.raises(ValueError, match=r"no double focus: magnet radius 0\.5 m is not below twice"):
         peak_widths(geometry(magnet_radius=0.5))
 
 
