@@ -127,10 +127,15 @@ def test_a_dead_supply_ends_unconfirmed_and_says_so(tmp_path: Path) -> None:
     assert not ended.world.plant.permit_closed  # type: ignore[union-attr] # escalated: the line was dropped
 
 
-def test_a_stuck_supply_is_never_called_parked(tmp_path: Path) -> None:
+def test_a_stuck_supply_is_called_parked_only_when_the_chain_has_cut_it(tmp_path: Path) -> None:
+    """It does not obey; the program drops the permit line, and the hardwired chain takes the volts away."""
     ended = rehearse(tmp_path, 'kind = "output stuck"\nat = "120 s"\nrole = "accelerating"')
-    assert ended.outcome.exit_code is ExitCode.PARKED_UNCONFIRMED
-    assert "accelerating" in ended.parking
+    assert ended.outcome.exit_code in (ExitCode.TRIPPED, ExitCode.PARKED_UNCONFIRMED)
+    assert any(event.what == "chain cut" for event in ended.world.truth.events)  # type: ignore[union-attr]
+    if ended.outcome.exit_code is ExitCode.TRIPPED:
+        assert_de_energised(ended)
+    else:
+        assert "accelerating" in ended.parking
 
 
 def test_a_fault_before_the_start_is_a_refusal_and_nothing_is_energised(tmp_path: Path) -> None:
